@@ -1,0 +1,443 @@
+"""The command line: parses a call, does one job, prints its result. Results to stdout, progress and errors to stderr."""
+
+from __future__ import annotations
+
+import argparse
+import contextlib
+import json
+import os
+import sys
+import threading
+import time
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import Any, TypeVar
+
+from core.errors import Cancelled, Infeasible, LotwrightError
+
+T = TypeVar("T")
+PATIENCE = 0.12
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the command line; return the exit code.
+
+    0 done; 1 `check`: a rule does not hold; 2 the sheet or call is wrong; 3 proved impossible; 4 stopped at a limit;
+    5 a record does not verify or a frozen file has changed; 130 cancelled.
+    """
+    parser = _parser()
+    call = parser.parse_args(arguments)
+    if call.job is None:
+        parser.print_help()
+        return 0
+    face = _Face(json=bool(getattr(call, "json", False)))
+    try:
+        code: int = _interruptible(lambda: call.job(call, face), face)
+    except LotwrightError as error:
+        face.fail(error)
+        code = error.exit_code
+    except MemoryError:
+        print("There is not enough memory for this. Lower --memory.", file=sys.stderr)
+        code = 2
+    except BrokenPipeError:
+        with contextlib.suppress(OSError):
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        code = 0
+    return code
+
+
+def _interruptible(job: Callable[[], T], face: _Face) -> T:
+    """Run the job in a thread, so that Ctrl-C is answered at once even in the middle of a long array operation."""
+    outcome: list[T] = []
+    error: list[BaseException] = []
+
+    def work() -> None:
+        try:
+            outcome.append(job())
+        except BaseException as raised:  # handed to the main thread, whatever it is
+            error.append(raised)
+
+    thread = threading.Thread(target=work, daemon=True)
+    thread.start()
+    try:
+        while thread.is_alive():
+            thread.join(0.05)
+    except KeyboardInterrupt:
+        face.cancel.set()
+        thread.join(PATIENCE)
+        if not thread.is_alive() and error and isinstance(error[0], LotwrightError):
+            raise error[0] from None
+        face.fail(Cancelled("Stopped. Finished blocks are kept; a draw goes on with --resume."))
+        sys.stderr.flush()
+        os._exit(Cancelled.exit_code)
+    if error:
+        raise error[0]
+    return outcome[0]
+
+
+class _Face:
+    """How the command line speaks."""
+
+    def __init__(self, *, json: bool) -> None:
+        self.json = json
+        self.cancel = threading.Event()
+        self._began = time.monotonic()
+        self._told = 0.0
+        self._bar = sys.stderr.isatty()
+
+    def tick(self) -> None:
+        """Stop the work if the user wishes it."""
+        if self.cancel.is_set():
+            raise Cancelled("Stopped.")
+
+    def progress(self, done: Any) -> None:
+        """Show counts, and a forecast of the time left, a few times a second at most."""
+        moment = time.monotonic()
+        if not done.proposed:
+            return
+        if moment - self._told < (0.2 if self._bar else 2.0) and self._told:
+            return
+        if not self._told and moment - self._began < 0.5:
+            return
+        self._told = moment
+        share = done.accepted / max(1, done.wanted)
+        left = (moment - self._began) * (1 - share) / share if share else None
+        text = f"{done.accepted:,} of {done.wanted:,} outcomes, {done.proposed:,} proposals"
+        text += f", about {_duration(left)} left" if left is not None else ", none accepted yet"
+        if self._bar:
+            print(f"\r{'#' * int(20 * share):<20} {text}", end="", file=sys.stderr, flush=True)
+        else:
+            print(text, file=sys.stderr, flush=True)
+
+    def show(self, value: object, lines: Sequence[str]) -> None:
+        """Print a result: as JSON if that was asked for, else as lines."""
+        if self._bar and self._told:
+            print(file=sys.stderr)
+        print(json.dumps(_safe(value), indent=1, ensure_ascii=False) if self.json else "\n".join(lines))
+
+    def remark(self, lines: Sequence[str]) -> None:
+        """Print remarks on the sheet to stderr."""
+        for line in lines:
+            print(f"Note: {line}", file=sys.stderr)
+
+    def fail(self, error: LotwrightError) -> None:
+        """Print an error in words."""
+        if self._bar and self._told:
+            print(file=sys.stderr)
+        print(error, file=sys.stderr)
+        if isinstance(error, Infeasible):
+            for id, words in zip(error.rules, error.words, strict=True):
+                print(f"  {id}: {words}", file=sys.stderr)
+            if len(error.rules) > 1:
+                print("Each of them could stay if one of the others were loosened or switched off.", file=sys.stderr)
+
+
+def _safe(value: Any) -> Any:
+    """Return JSON values with integers beyond 2^53 as text."""
+    if isinstance(value, dict):
+        return {key: _safe(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_safe(item) for item in value]
+    if isinstance(value, int) and not isinstance(value, bool) and abs(value) > 1 << 53:
+        return str(value)
+    return value
+
+
+def _duration(seconds: float) -> str:
+    if seconds < 90:
+        return f"{seconds:.0f} s"
+    return f"{seconds / 60:.0f} min" if seconds < 5400 else f"{seconds / 3600:.1f} h"
+
+
+# -- jobs -----------------------------------------------------------------------------------------------------------
+# Heavy modules are imported inside the jobs, so that --help answers at once.
+
+
+def _plan(call: argparse.Namespace, face: _Face) -> int:
+    from core import jobs
+    from core.files import json_bytes, open_sheet, write_whole
+    from core.planner import make_plan
+
+    sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
+    face.remark(sheet.notices)
+    made = make_plan(sheet, outcomes=call.outcomes, memory=call.memory, tick=face.tick)
+    if call.to is not None:
+        write_whole(call.to, json_bytes(made.plan.to_json()))
+    told = jobs.forecast(made)
+    face.show(told, _plan_lines(sheet, made, told))
+    return 0
+
+
+def _plan_lines(sheet: Any, made: Any, told: dict[str, Any]) -> list[str]:
+    lines = [sheet.title or sheet.name, sheet.kind.words(), ""]
+    for rule in sheet.rules:
+        where = "built in" if rule.id in made.plan.built_in else "checked"
+        lines.append(f"  {rule.id} ({where}): {rule.words()}")
+    lines += [f"  {rule.id} (switched off): {rule.words}" for rule in sheet.off]
+    lines += ["", *made.plan.words, f"Superset: {made.plan.about} outcomes."]
+    lines += _size_lines(told["admissible"])
+    acceptance = told["acceptance"]
+    if made.plan.checked:
+        lines.append(
+            f"Acceptance in the pilot: {acceptance['estimate']:.4g}, between {acceptance['low']:.4g} and "
+            f"{acceptance['high']:.4g} (95 %); {_per_outcome(acceptance)}."
+        )
+    lines.append(f"Plan digest: {told['plan_digest']}")
+    return lines
+
+
+def _per_outcome(acceptance: dict[str, Any]) -> str:
+    if not acceptance["estimate"]:
+        return f"more than {1 / acceptance['high']:,.0f} proposals per outcome"
+    return f"about {1 / acceptance['estimate']:,.3g} proposals per outcome"
+
+
+def _size_lines(size: dict[str, Any]) -> list[str]:
+    from core.planner import size_words
+
+    if size["exact"]:
+        count = int(size["size"])
+        lines = [f"Admissible outcomes: {size_words(count, exact=True)} (exact: {count})."]
+        return [*lines, "There is only one admissible outcome: no randomness is left."] if count == 1 else lines
+    low, high = size_words(int(size["low"]), exact=True), size_words(int(size["high"]), exact=True)
+    estimate = size_words(int(size["estimate"]), exact=True)
+    return [f"Admissible outcomes: about {estimate}, between {low} and {high} (95 %)."]
+
+
+def _draw(call: argparse.Namespace, face: _Face) -> int:
+    from core import jobs
+    from core.files import unique_parties
+
+    wish = jobs.Wish(
+        sheet=call.sheet,
+        parties=tuple(unique_parties(call.seed)),
+        folder=call.to,
+        outcomes=call.outcomes,
+        plan=call.plan,
+        workers=call.workers,
+        limit=call.limit,
+        reason=call.reason,
+        resume=call.resume,
+        memory=call.memory,
+        allow_outside=call.allow_outside,
+    )
+    result = jobs.draw_to_files(wish, cancelled=face.cancel.is_set, on_progress=face.progress, tick=face.tick)
+    face.remark(result.sheet.notices)
+    told = {
+        **jobs.forecast(result.ready),
+        "ledger": result.record["ledger"],
+        "admissible": result.record["admissible"],
+        "outcomes_file": str(result.outcomes_file),
+        "record": str(result.record_file),
+    }
+    face.show(told, _draw_lines(result))
+    return 0
+
+
+def _draw_lines(result: Any) -> list[str]:
+    record, sheet = result.record, result.sheet
+    ledger = record["ledger"]
+    lines = [sheet.title or sheet.name, sheet.kind.words(), ""]
+    lines += _outcome_lines(sheet, result.drawn.rows)
+    lines += ["", f"Proposals: {ledger['proposed']:,}; accepted: {ledger['accepted']:,}."]
+    for rule in ledger["rules"]:
+        sentence = sheet.rule(rule["id"]).words()
+        lines.append(f"  rejected first by {rule['id']}: {rule['first']:,}  ({sentence})")
+    lines += _size_lines(record["admissible"])
+    number = record["draw"]
+    if record["frozen"]:
+        lines.append(f"Draw {number['number']} of {number['of']} from the draw book; frozen {record['frozen']['at']}.")
+    lines += ["", "Cautions", *(f"  - {caution}" for caution in record["cautions"])]
+    lines += ["", f"Outcomes: {result.outcomes_file}", f"Record: {result.record_file}"]
+    return lines
+
+
+def _outcome_lines(sheet: Any, rows: Any, most: int = 60) -> list[str]:
+    """Return the first outcome, or its beginning."""
+    lines = [" ".join(line) for line in sheet.kind.lines(rows[0], sheet.frame.ids)]
+    head = f"Outcome 1 of {len(rows):,}" if len(rows) > 1 else "Outcome"
+    rest = [f"  ... and {len(lines) - most:,} more lines in the file"] if len(lines) > most else []
+    return [f"{head} ({', '.join(sheet.kind.header)})", *(f"  {line}" for line in lines[:most]), *rest]
+
+
+def _chances(call: argparse.Namespace, face: _Face) -> int:
+    from core.chances import inclusion
+    from core.files import open_sheet
+    from core.planner import make_plan
+
+    sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
+    face.remark(sheet.notices)
+    made = make_plan(sheet, outcomes=10_000, memory=call.memory, tick=face.tick)
+    told = inclusion(made, cells=call.cells, pairs=call.pairs, limit=call.limit, tick=face.tick)
+    face.show(told.to_json(), told.lines())
+    return 0
+
+
+def _check(call: argparse.Namespace, face: _Face) -> int:
+    from core import jobs
+
+    told = jobs.check(call.sheet, call.outcome, allow_outside=call.allow_outside)
+    several = len({item["outcome"] for item in told}) > 1
+    lines = []
+    for item in told:
+        head = f"outcome {item['outcome']}, " if several else ""
+        figure = f" Found: {item['found']}." if item.get("found") else ""
+        lines.append(f"{'holds' if item['holds'] else 'BROKEN':<7}{head}{item['id']}: {item['words']}{figure}")
+    face.show({"rules": told}, lines)
+    return 0 if all(item["holds"] for item in told) else 1
+
+
+def _freeze(call: argparse.Namespace, face: _Face) -> int:
+    from core import jobs
+    from core.record import readable
+
+    content = jobs.freeze(
+        call.sheet, outcomes=call.outcomes, memory=call.memory, allow_outside=call.allow_outside, tick=face.tick
+    )
+    made = content.pop("ready")
+    face.remark(made.sheet.notices)
+    told = {"digest": content["digest"], "readable": readable(content["digest"]), "entry": content["entry"]}
+    lines = [
+        f"Frozen {content['at']}: the sheet, {len(content['files'])} list(s) and the plan for {call.outcomes:,} outcome(s).",
+        f"Digest: {content['digest']}",
+        f"To read aloud: {readable(content['digest'])}",
+        f"Entry {content['entry']} of the draw book {jobs.book_of(call.sheet).path.name}.",
+        "Publish the digest before the seed is known; then draw with a seed from outside.",
+    ]
+    face.show(told, lines)
+    return 0
+
+
+def _verify(call: argparse.Namespace, face: _Face) -> int:
+    from core import jobs
+
+    if call.independent:
+        from core.sceptic import examine
+
+        findings = examine(call.record, call.sheet)
+        lines = [f"{'holds' if f.holds else 'BROKEN':<7}{f.part}: {f.words}" for f in findings]
+        good = all(f.holds for f in findings)
+        found = [{"part": f.part, "outcome": f.outcome, "holds": f.holds, "words": f.words} for f in findings]
+        face.show({"verified": good, "findings": found}, lines)
+        return 0 if good else 5
+    told = jobs.verify(
+        call.record,
+        sheet_path=call.sheet,
+        workers=call.workers,
+        allow_outside=call.allow_outside,
+        on_progress=face.progress,
+        tick=face.tick,
+    )
+    lines = [
+        f"Verified: the replay of {told['proposals']:,} proposals gives the same {told['outcomes']:,} outcome(s), "
+        "byte for byte.",
+        f"Draw {told['draw']} of a frozen sheet." if told["frozen"] else "The sheet was not frozen before this draw.",
+        told["versions"],
+    ]
+    face.show(told, lines)
+    return 0
+
+
+def _explain(call: argparse.Namespace, face: _Face) -> int:
+    from core import sheet  # noqa: F401  (loads kinds and rules)
+    from core.explain import explain
+
+    text = explain(call.word)
+    face.show({"text": text}, [text])
+    return 0
+
+
+# -- the parser -----------------------------------------------------------------------------------------------------
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="lotwright",
+        description="Draws one outcome out of all that satisfy the rules, each with exactly the same chance.",
+        epilog="Example: lotwright draw sheet.toml --seed '4 0 7 1 9 3'",
+    )
+    parser.set_defaults(job=None)
+    jobs = parser.add_subparsers(title="jobs", metavar="JOB")
+    one = _adder(jobs)
+    plan = one("plan", _plan, "forecast without drawing", "lotwright plan sheet.toml --outcomes 1000")
+    _sheet(plan)
+    plan.add_argument("--outcomes", type=_positive, default=1, metavar="N", help="how many outcomes are wanted")
+    plan.add_argument("--to", type=Path, metavar="PLAN", help="write the plan to this file")
+    draw = one("draw", _draw, "draw outcomes", "lotwright draw sheet.toml --seed '40719 33580' --to result")
+    _sheet(draw)
+    draw.add_argument(
+        "--seed", action="append", default=[], metavar="TEXT", help="the public seed; several: NAME=TEXT each"
+    )
+    draw.add_argument("--outcomes", type=_positive, metavar="N", help="how many (default: 1, or as frozen)")
+    draw.add_argument(
+        "--to", type=Path, default=Path("drawn"), metavar="DIR", help="folder of the result (default: drawn)"
+    )
+    draw.add_argument("--plan", type=Path, metavar="PLAN", help="use this plan instead of planning")
+    draw.add_argument("--workers", type=_positive, default=1, metavar="W", help="processes; the result is the same")
+    draw.add_argument("--limit", type=_positive, metavar="PROPOSALS", help="stop after so many proposals")
+    draw.add_argument("--reason", default="", metavar="TEXT", help="why a frozen sheet is drawn again")
+    draw.add_argument("--resume", action="store_true", help="go on with an interrupted draw")
+    chances = one("chances", _chances, "chances of every unit", "lotwright chances sheet.toml --pairs")
+    _sheet(chances)
+    chances.add_argument("--cells", action="store_true", help="also of each unit in each place")
+    chances.add_argument("--pairs", action="store_true", help="also of each two units together")
+    chances.add_argument("--limit", type=_positive, metavar="PROPOSALS", help="stop after so many proposals")
+    check = one("check", _check, "does a given outcome meet each rule", "lotwright check sheet.toml outcome.csv")
+    _sheet(check)
+    check.add_argument("outcome", type=Path, metavar="OUTCOME", help="a file with the columns of outcomes.csv")
+    freeze = one("freeze", _freeze, "fix sheet, lists and plan by their digest", "lotwright freeze sheet.toml")
+    _sheet(freeze)
+    freeze.add_argument("--outcomes", type=_positive, default=1, metavar="N", help="how many will be drawn")
+    verify = one("verify", _verify, "replay a record", "lotwright verify drawn/record.json --independent")
+    verify.add_argument("record", type=Path, metavar="RECORD")
+    verify.add_argument("--sheet", type=Path, metavar="SHEET", help="where the sheet is, if not beside the record")
+    verify.add_argument("--independent", action="store_true", help="re-check the outcomes by a second implementation")
+    verify.add_argument("--workers", type=_positive, default=1, metavar="W", help="processes")
+    _common(verify)
+    explain = one("explain", _explain, "what a rule or a kind means", "lotwright explain quota")
+    explain.add_argument("word", nargs="?", metavar="WORD", help="a rule or a kind of outcome")
+    explain.add_argument("--json", action="store_true", help="print JSON")
+    return parser
+
+
+def _adder(jobs: Any) -> Callable[[str, Callable[..., int], str, str], argparse.ArgumentParser]:
+    def add(name: str, job: Callable[..., int], words: str, example: str) -> argparse.ArgumentParser:
+        parser: argparse.ArgumentParser = jobs.add_parser(
+            name, help=words, description=f"{words.capitalize()}.", epilog=f"Example: {example}"
+        )
+        parser.set_defaults(job=job)
+        return parser
+
+    return add
+
+
+def _sheet(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("sheet", type=Path, metavar="SHEET", help="a sheet (.toml)")
+    parser.add_argument("--memory", type=_gibibytes, default=4.0, metavar="GiB", help="for planning (default: 4)")
+    _common(parser)
+
+
+def _common(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("--json", action="store_true", help="print JSON")
+    parser.add_argument("--allow-outside", action="store_true", help="allow lists outside the sheet's folder")
+
+
+def _positive(text: str) -> int:
+    number = int(text) if text.isascii() and text.isdecimal() else 0
+    if not 1 <= number <= 10**12:
+        raise argparse.ArgumentTypeError(f"{text!r} is not an integer from 1 to 10^12")
+    return number
+
+
+def _gibibytes(text: str) -> float:
+    try:
+        number = float(text)
+    except ValueError:
+        number = 0.0
+    if not 0.01 <= number <= 4096:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a number of GiB from 0.01 to 4096")
+    return number
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,414 @@
+"""Planning: which rules are built into the superset, and which are checked.
+
+Planning is part of the draw: the same sheet must give the same plan on every machine, so everything is counted in
+*steps* (nominal nanoseconds from the table of constants below), no clock decides, pilots have fixed numbers of proposals,
+and their bits come from a key of their own.
+
+The search widens its budget step by step. Within a budget it tries to build in everything, then adds rules one at a time
+where that saves most; it stops when a wider search would cost more than it could save.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+from fractions import Fraction
+from typing import Any
+
+from core.errors import Infeasible
+from core.ledger import Ledger
+from core.proposals import run_block
+from core.rules import Rule
+from core.sheet import Sheet, digest_of
+from core.stream import Bits, make_key
+from core.supersets import ARRANGEMENTS, arrangements, superset
+from core.supersets.diagram import Diagram, OverBudget
+
+FORMAT = "lotwright plan 1"
+
+# Nominal nanoseconds, measured once (two cores, numpy 2.4) and shipped: part of what fixes the plan.
+STEPS_PER_EDGE = 100
+STEPS_PER_LEVEL = 150
+STEPS_PER_ELEMENT = 12
+STEPS_PER_CHECK = 4
+BYTES_PER_EDGE = 200
+BUDGETS = (100_000, 1_000_000, 8_000_000, 64_000_000)
+# So much is always spent on the attempt to build in every rule: the exact size is worth it.
+WORTH_THE_SIZE = 1_000_000
+PILOT = 1024
+LONGEST_PILOT = 32 * PILOT
+WANTED_IN_PILOT = 50
+MOST_EDGES_COUNTED = 6_000_000
+
+Tick = Callable[[], None]
+
+
+@dataclass(frozen=True)
+class Plan:
+    """How a sheet is drawn: all that a draw needs besides the sheet and the seed, as plain values.
+
+    Attributes
+    ----------
+    sheet
+        Digest of the sheet planned for.
+    outcomes, memory
+        What was asked: how many outcomes, and GiB.
+    arrangement
+        Name of the order of levels.
+    built_in, checked
+        Ids of the rules built in, and of those checked in the order of checking.
+    block
+        Proposals per block.
+    edges, nodes
+        Size of the diagram.
+    superset
+        SHA-256 of the diagram's limits and edges: a rebuilt diagram must have the same.
+    size
+        Exact number of outcomes of the superset as decimal text, or None where the diagram is too large to count with
+        integers; `about` is its size in words.
+    pilot
+        Ledger of the pilot: proposals made with bits of their own and thrown away.
+    words
+        Why, in sentences.
+    """
+
+    sheet: str
+    outcomes: int
+    memory: float
+    arrangement: str
+    built_in: tuple[str, ...]
+    checked: tuple[str, ...]
+    block: int
+    edges: int
+    nodes: int
+    superset: str
+    size: str | None
+    about: str
+    pilot: dict[str, Any]
+    words: tuple[str, ...]
+
+    def to_json(self) -> dict[str, Any]:
+        """Return the plan as JSON values."""
+        return {
+            "format": FORMAT,
+            "sheet": self.sheet,
+            "outcomes": self.outcomes,
+            "memory": str(self.memory),
+            "arrangement": self.arrangement,
+            "built_in": list(self.built_in),
+            "checked": list(self.checked),
+            "block": self.block,
+            "edges": self.edges,
+            "nodes": self.nodes,
+            "superset": self.superset,
+            "size": self.size,
+            "about": self.about,
+            "pilot": self.pilot,
+            "words": list(self.words),
+        }
+
+    @classmethod
+    def from_json(cls, value: dict[str, Any]) -> Plan:
+        """Return the plan that JSON values state. Raises KeyError, TypeError or ValueError if they are none."""
+        if value["format"] != FORMAT:
+            raise ValueError(f"this is no plan of a known format: {value['format']}")
+        return cls(
+            sheet=str(value["sheet"]),
+            outcomes=int(value["outcomes"]),
+            memory=float(value["memory"]),
+            arrangement=str(value["arrangement"]),
+            built_in=tuple(map(str, value["built_in"])),
+            checked=tuple(map(str, value["checked"])),
+            block=int(value["block"]),
+            edges=int(value["edges"]),
+            nodes=int(value["nodes"]),
+            superset=str(value["superset"]),
+            size=None if value["size"] is None else str(value["size"]),
+            about=str(value["about"]),
+            pilot=dict(value["pilot"]),
+            words=tuple(map(str, value["words"])),
+        )
+
+    @property
+    def digest(self) -> str:
+        """SHA-256 of the plan in canonical form."""
+        return digest_of(self.to_json())
+
+
+@dataclass(frozen=True, eq=False)
+class Ready:
+    """A plan together with what it stands for, ready to propose."""
+
+    sheet: Sheet
+    plan: Plan
+    diagram: Diagram
+    checks: tuple[Rule, ...]
+
+
+@dataclass
+class _Candidate:
+    rules: tuple[Rule, ...]
+    diagram: Diagram
+    arrangement: str
+    pilot: Ledger
+    steps: int
+    per_proposal: int
+
+    def acceptance(self) -> float:
+        """Return the acceptance for comparing: where the pilot accepts nothing, the product of the single rates."""
+        if self.pilot.accepted:
+            return self.pilot.accepted / self.pilot.proposed
+        rate = 1.0
+        for count in self.pilot.rules.values():
+            rate *= (self.pilot.sampled - count.any + 0.5) / (self.pilot.sampled + 1)
+        return min(rate, 0.5 / (self.pilot.proposed + 1))
+
+    def cost(self, outcomes: int) -> float:
+        """Return steps to build and to draw so many outcomes."""
+        return self.steps + outcomes * self.per_proposal / self.acceptance()
+
+
+@dataclass
+class _Search:
+    sheet: Sheet
+    outcomes: int
+    memory: float
+    tick: Tick
+    spent: int = 0
+    tried: dict[tuple[str, ...], int] = field(default_factory=dict)
+    found: dict[tuple[str, ...], _Candidate] = field(default_factory=dict)
+
+    def best(self) -> _Candidate:
+        return min(self.found.values(), key=lambda c: (c.cost(self.outcomes), [r.id for r in c.rules]))
+
+    def attempt(self, rules: Sequence[Rule], budget: int) -> _Candidate | None:
+        """Return the candidate that builds in these rules, or None if it would need more edges than `budget`."""
+        chosen = tuple(rule for rule in self.sheet.rules if rule in rules)
+        ids = tuple(rule.id for rule in chosen)
+        if ids in self.found:
+            return self.found[ids]
+        if self.tried.get(ids, -1) >= budget:
+            return None
+        self.tried[ids] = budget
+        smallest = self._smallest(chosen, budget)
+        if smallest is None:
+            return None
+        diagram, arrangement = smallest
+        if diagram.is_empty:
+            raise _impossible(self.sheet, chosen, arrangement, budget, self.tick)
+        self.found[ids] = self._piloted(chosen, diagram, arrangement)
+        return self.found[ids]
+
+    def _smallest(self, chosen: tuple[Rule, ...], budget: int) -> tuple[Diagram, str] | None:
+        found: tuple[Diagram, str] | None = None
+        for arrangement in arrangements(self.sheet.kind):
+            if found is not None and found[0].steps < BUDGETS[0] // 5:
+                break
+            limit = budget if found is None else found[0].steps - 1
+            try:
+                diagram = superset(self.sheet.kind, chosen, arrangement, budget=limit, tick=self.tick)
+            except OverBudget:
+                self.spent += limit * STEPS_PER_EDGE
+                continue
+            self.spent += diagram.steps * STEPS_PER_EDGE
+            found = diagram, arrangement
+        return found
+
+    def _piloted(self, chosen: tuple[Rule, ...], diagram: Diagram, arrangement: str) -> _Candidate:
+        checks = [rule for rule in self.sheet.rules if rule not in chosen]
+        pilot = run_pilot(self.sheet, diagram, checks, PILOT)
+        width = self.sheet.kind.width
+        per_proposal = diagram.levels * STEPS_PER_LEVEL + width * STEPS_PER_ELEMENT
+        per_proposal += sum(rule.effort() for rule in checks) * width * STEPS_PER_CHECK
+        self.spent += PILOT * per_proposal
+        return _Candidate(chosen, diagram, arrangement, pilot, diagram.steps * STEPS_PER_EDGE, per_proposal)
+
+    def run(self) -> _Candidate:
+        """Search within wider and wider budgets; return the cheapest candidate."""
+        largest = int(self.memory * 2**30) // BYTES_PER_EDGE
+        rules = self.sheet.rules
+        self.attempt((), largest)
+        if not self.found:
+            raise Infeasible("Planning needs more memory than allowed even without building in a rule; raise --memory.")
+        for budget in BUDGETS:
+            budget = min(budget, largest)
+            if budget > WORTH_THE_SIZE and budget * STEPS_PER_EDGE > self.best().cost(self.outcomes):
+                break
+            if self.attempt(rules, budget) is not None:
+                break
+            self._grow(budget)
+        full = self.found.get(tuple(rule.id for rule in rules))
+        if full is not None and full.diagram.steps <= WORTH_THE_SIZE:
+            return full
+        return self.best()
+
+    def _grow(self, budget: int) -> None:
+        """Add rules one at a time to the best candidate, while that pays."""
+        current = self.best()
+        while True:
+            cost = current.cost(self.outcomes)
+            limit = min(budget, max(BUDGETS[0], int(cost) // STEPS_PER_EDGE))
+            better: _Candidate | None = None
+            for rule in self.sheet.rules:
+                if rule in current.rules or not current.pilot.rules[rule.id].any:
+                    continue
+                candidate = self.attempt((*current.rules, rule), limit)
+                if candidate is not None and candidate.cost(self.outcomes) < 0.95 * cost:
+                    cost, better = candidate.cost(self.outcomes) / 0.95, candidate
+            if better is None:
+                return
+            current = better
+
+
+def run_pilot(sheet: Sheet, diagram: Diagram, checks: Sequence[Rule], proposals: int) -> Ledger:
+    """Return the ledger of a pilot: its bits are not those of any draw."""
+    ids = [rule.id for rule in checks]
+    key = make_key("pilot", sheet.digest)
+    ledger = Ledger.over(ids)
+    size = pilot_block(sheet)
+    for block in range((proposals + size - 1) // size):
+        count = min(size, proposals - block * size)
+        ledger.add(run_block(diagram, checks, Bits(key, block), count, count).ledger(ids))
+    return ledger
+
+
+def pilot_block(sheet: Sheet) -> int:
+    """Return how many proposals are handled at once: fewer where an outcome is large."""
+    return max(16, min(PILOT, (1 << 22) // sheet.kind.width))
+
+
+def make_plan(sheet: Sheet, *, outcomes: int = 1, memory: float = 4.0, tick: Tick = lambda: None) -> Ready:
+    """Return the plan of a sheet.
+
+    Parameters
+    ----------
+    outcomes
+        How many outcomes are wanted: the more, the more planning pays.
+    memory
+        GiB that a diagram may take.
+    tick
+        Called often; may raise to stop the work.
+
+    Raises
+    ------
+    Infeasible
+        if it is proved that no outcome meets the rules; carries a smallest conflicting set.
+    """
+    search = _Search(sheet, outcomes, memory, tick)
+    best = search.run()
+    checks = [rule for rule in sheet.rules if rule not in best.rules]
+    pilot = best.pilot
+    proposals = PILOT
+    while checks and pilot.accepted < WANTED_IN_PILOT and proposals < LONGEST_PILOT:
+        proposals *= 4
+        pilot = run_pilot(sheet, best.diagram, checks, proposals)
+        tick()
+    checks.sort(key=lambda rule: (-Fraction(pilot.rules[rule.id].any, rule.effort()), rule.id))
+    countable = best.diagram.edges <= MOST_EDGES_COUNTED
+    plan = Plan(
+        sheet=sheet.digest,
+        outcomes=outcomes,
+        memory=memory,
+        arrangement=best.arrangement,
+        built_in=tuple(rule.id for rule in best.rules),
+        checked=tuple(rule.id for rule in checks),
+        block=_block_size(sheet, outcomes, max(best.acceptance(), 1e-6)),
+        edges=best.diagram.edges,
+        nodes=best.diagram.nodes,
+        superset=best.diagram.digest,
+        size=str(best.diagram.size) if countable else None,
+        about=size_words(best.diagram.size if countable else int(best.diagram.weight), exact=countable),
+        pilot=_pilot_json(pilot, [rule.id for rule in checks]),
+        words=_reasons(search, best),
+    )
+    return Ready(sheet, plan, best.diagram, tuple(checks))
+
+
+def ready(sheet: Sheet, plan: Plan, *, tick: Tick = lambda: None) -> Ready:
+    """Return a plan made earlier, its superset built again.
+
+    Raises
+    ------
+    ValueError
+        naming what differs: the plan was made for another sheet, or the superset comes out differently.
+    """
+    if plan.sheet != sheet.digest:
+        raise ValueError("the plan was made for another sheet")
+    known = {rule.id: rule for rule in sheet.rules}
+    if sorted(plan.built_in + plan.checked) != sorted(known) or plan.arrangement not in ARRANGEMENTS:
+        raise ValueError("the plan names other rules than the sheet")
+    largest = int(plan.memory * 2**30) // BYTES_PER_EDGE
+    built_in = [rule for rule in sheet.rules if rule.id in plan.built_in]
+    diagram = superset(sheet.kind, built_in, plan.arrangement, budget=largest, tick=tick)
+    if diagram.digest != plan.superset:
+        raise ValueError("the superset comes out differently here than when the plan was made")
+    return Ready(sheet, plan, diagram, tuple(known[id] for id in plan.checked))
+
+
+def _impossible(sheet: Sheet, rules: tuple[Rule, ...], arrangement: str, budget: int, tick: Tick) -> Infeasible:
+    """Return the proof that the rules conflict, with a smallest set: each rule left out makes it possible."""
+    conflict = list(rules)
+    for rule in rules:
+        rest = [other for other in conflict if other is not rule]
+        try:
+            if superset(sheet.kind, rest, arrangement, budget=4 * budget, tick=tick).is_empty:
+                conflict = rest
+        except OverBudget:
+            continue
+    if len(conflict) == 1:
+        message = "No outcome is possible: this rule can never hold."
+    else:
+        message = f"No outcome is possible: these {len(conflict)} rules cannot hold together."
+    return Infeasible(message, tuple(r.id for r in conflict), tuple(r.words() for r in conflict))
+
+
+def _block_size(sheet: Sheet, outcomes: int, acceptance: float) -> int:
+    """Return proposals per block: a power of two, enough for the outcomes wanted, small enough to stop quickly."""
+    most = max(16, min(4096, (1 << 21) // sheet.kind.width))
+    wanted = max(64, min(most, int(2 * outcomes / acceptance)))
+    return min(most, 1 << (wanted - 1).bit_length())
+
+
+def _pilot_json(pilot: Ledger, ids: Sequence[str]) -> dict[str, Any]:
+    return {
+        "proposals": pilot.proposed,
+        "accepted": pilot.accepted,
+        "rules": [{"id": id, "any": pilot.rules[id].any, "alone": pilot.rules[id].alone} for id in ids],
+    }
+
+
+def _reasons(search: _Search, best: _Candidate) -> tuple[str, ...]:
+    """Return in sentences why the plan is as it is."""
+    rules = search.sheet.rules
+    checks = [rule for rule in rules if rule not in best.rules]
+    words = [f"The superset is built level by level, {ARRANGEMENTS[best.arrangement]}."]
+    if not checks:
+        words.append("Every rule is built in: each proposal is an outcome, and the number of outcomes is exact.")
+        return tuple(words)
+    for rule in checks:
+        count = best.pilot.rules[rule.id]
+        share = f"rejects {100 * count.any / max(1, best.pilot.sampled):.3g} % of the pilot's proposals"
+        ids = tuple(r.id for r in rules if r in best.rules or r is rule)
+        if not count.any:
+            reason = "it rejected nothing in the pilot, so building it in would gain nothing"
+        elif ids in search.found:
+            reason = "building it in would take longer than it saves"
+        elif ids in search.tried:
+            reason = f"built in, it would need more than {search.tried[ids]:,} edges"
+        else:
+            reason = "another choice of rules is cheaper"
+        words.append(f"Rule {rule.id} is checked ({share}): {reason}.")
+    return tuple(words)
+
+
+def size_words(size: int, *, exact: bool) -> str:
+    """Return a number of outcomes in words: digits up to 10^15, else a power of ten with four digits."""
+    about = "" if exact else "about "
+    if size < 10**15:
+        return f"{about}{size:,}"
+    digits = str(size)
+    lead = round(int(digits[:8]) / 10_000)
+    exponent = len(digits) - 1
+    if lead == 10_000:
+        lead, exponent = 1000, exponent + 1
+    return f"{about}{lead // 1000}.{lead % 1000:03d} x 10^{exponent}"

@@ -1,0 +1,61 @@
+"""Agree: the two of a pair agree in a column."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+
+from core.pairrules import PairFields, alike_table, pair_words, partners_allowed
+from core.parts import Mask
+from core.process import Rows
+from core.reading import Report
+from core.rules import PAIRING, Case, Rule
+from core.setting import Setting
+
+
+class Agree(Rule):
+    """The partners' values are the same, or differ by a number within bounds. `allowed` is a table over pairs of units."""
+
+    name = "agree"
+    kinds = (PAIRING,)
+    meaning = (
+        "The two of each pair have the same value of `column`; with `by_at_most` or `by_at_least` the numbers differ by so "
+        "much."
+    )
+    example = '[[rule]]\nkind = "agree"\ncolumn = "level"\nby_at_most = 1'
+    Fields = PairFields
+
+    def __init__(self, setting: Setting, allowed: Mask, fields: PairFields) -> None:
+        self._setting, self._allowed, self._fields = setting, allowed, fields
+
+    @classmethod
+    def of(cls, fields: Any, setting: Setting, report: Report) -> Agree | None:
+        """Read the column."""
+        table = alike_table(fields, setting, report)
+        if table is None:
+            return None
+        return cls(setting, table, fields)
+
+    @classmethod
+    def cases(cls) -> Sequence[Case]:
+        """Return examples."""
+        units = tuple({"id": f"u{i}", "c": "abab"[i], "n": i} for i in range(4))
+        return [
+            Case(units, {"kind": "pairing"}, {"column": "c"}),
+            Case(units, {"kind": "pairing"}, {"column": "n", "by_at_most": 1}),
+        ]
+
+    def check(self, rows: Rows) -> Mask:
+        """Look up every pair."""
+        return partners_allowed(self._allowed, rows)
+
+    def words(self) -> str:
+        """Return for example "The two of each pair have the same level."."""
+        return pair_words(self._fields, f"The two of each pair have the same {self._fields.column}.")
+
+    def cells(self) -> tuple[Mask, Mask] | None:
+        """Close the pairs that are not alike enough."""
+        may = np.concatenate([self._allowed, np.ones((len(self._allowed), 1), bool)], axis=1)
+        return may, np.zeros_like(may)
