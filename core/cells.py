@@ -22,7 +22,7 @@ CONTROLS = r"[\x00-\x08\x0B-\x1F\x7F-\x{9F}\x{FEFF}]"
 # All characters that may change, or change others, when text is composed (NFC), and more: looking for them is
 # several times quicker than composing.
 LOOSE = (
-    r"[\p{M}\x{37E}\x{387}\x{958}-\x{95F}\x{9DC}-\x{9DF}\x{A33}-\x{A5E}\x{B5C}\x{B5D}\x{F43}-\x{FB9}"
+    r"[\p{M}\x{374}\x{37E}\x{387}\x{958}-\x{95F}\x{9DC}-\x{9DF}\x{A33}-\x{A5E}\x{B5C}\x{B5D}\x{F43}-\x{FB9}"
     r"\x{1100}-\x{11FF}\x{1F00}-\x{2001}\x{2126}-\x{212B}\x{2329}\x{232A}\x{2ADC}\x{F900}-\x{10FFFF}]"
 )
 

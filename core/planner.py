@@ -200,9 +200,14 @@ class _Search:
         return self.found[ids]
 
     def _smallest(self, chosen: tuple[Rule, ...], budget: int) -> tuple[Diagram, str] | None:
+        """Return the smallest diagram of these rules over the orders of levels worth trying."""
         found: tuple[Diagram, str] | None = None
-        for arrangement in arrangements(self.sheet.kind):
+        names = arrangements(self.sheet.kind)
+        for arrangement in names:
             if found is not None and found[0].steps < BUDGETS[0] // 5:
+                break
+            # the order of the list seldom beats the first choice: not worth a second attempt that fails
+            if arrangement == "list" and arrangement != names[0] and found is None and budget <= WORTH_THE_SIZE:
                 break
             limit = budget if found is None else found[0].steps - 1
             try:

@@ -33,7 +33,7 @@ from core.cells import (
 )
 from core.errors import Fault, SheetError
 from core.frame import Table, clean, listed, nearest, shortened
-from core.records import (
+from core.csvtext import (
     SEPARATORS,
     Layout,
     blank_records,
@@ -292,7 +292,7 @@ def _text_of(raw: bytes, shown: str, encoding: str) -> bytes:
     try:
         return raw.decode(encoding).removeprefix(MARK).encode("utf-8")
     except UnicodeDecodeError as error:
-        raise _wrong_bytes(error, shown) from None
+        raise _wrong_bytes(error, encoding, shown) from None
 
 
 def _check_utf8(raw: bytes, shown: str) -> None:
@@ -306,13 +306,13 @@ def _check_utf8(raw: bytes, shown: str) -> None:
         try:
             raw.decode("utf-8")
         except UnicodeDecodeError as error:
-            raise _wrong_bytes(error, shown) from None
+            raise _wrong_bytes(error, "utf-8", shown) from None
 
 
-def _wrong_bytes(error: UnicodeDecodeError, shown: str) -> SheetError:
-    line = error.object[: error.start].decode(error.encoding, "replace").count("\n") + 1
+def _wrong_bytes(error: UnicodeDecodeError, encoding: str, shown: str) -> SheetError:
+    line = error.object[: error.start].decode(encoding, "replace").count("\n") + 1
     found = " ".join(f"{byte:02X}" for byte in error.object[error.start : max(error.end, error.start + 1)][:4])
-    message = f"these bytes are not {error.encoding}; name the encoding of the file, such as"
+    message = f"these bytes are not {encoding}; name the encoding of the file, such as"
     return SheetError(Fault(f'{message} encoding = "cp1252".', shown, f"line {line}", found=found))
 
 
@@ -330,8 +330,8 @@ def _read_csv(raw: bytes, shown: str, encoding: str, separator: str, sha256: str
         layout = layout_of(data, separator)
         if encoding == "utf-8" and layout.highest >= 0x80:
             _check_utf8(raw, shown)
-        newlines = layout.newlines + (len(raw) - len(data)) if encoding == "utf-8" else _newlines_of(raw)
-        blocks = beside.submit(_block_digests, raw, newlines)
+        newlines = layout.newlines if encoding == "utf-8" else _newlines_of(raw)
+        blocks = beside.submit(_block_digests, raw, newlines, len(raw) - len(data) if encoding == "utf-8" else 0)
         blank = blank_records(data, layout)
         names, lines = _checked(data, layout, blank, shown, encoding, separator)
         if blank.any():
@@ -351,9 +351,9 @@ def _newlines_of(raw: bytes) -> NDArray[np.int64]:
     return np.flatnonzero(np.frombuffer(raw, np.uint8) == ord("\n"))
 
 
-def _block_digests(raw: bytes, newlines: NDArray[np.int64]) -> tuple[str, ...]:
-    """Return the SHA-256 of each run of 1,000 lines."""
-    cuts = [0, *(newlines[BLOCK_LINES - 1 :: BLOCK_LINES] + 1).tolist()]
+def _block_digests(raw: bytes, newlines: NDArray[np.int64], shift: int) -> tuple[str, ...]:
+    """Return the SHA-256 of each run of 1,000 lines; `shift` is what to add to the offsets of newlines."""
+    cuts = [0, *(newlines[BLOCK_LINES - 1 :: BLOCK_LINES] + (shift + 1)).tolist()]
     if cuts[-1] != len(raw):
         cuts.append(len(raw))
     view = memoryview(raw)

@@ -88,7 +88,7 @@ class Pairing(OutcomeKind):
         return self.units, self.units + 1
 
     def alike(self, cells: Cells) -> NDArray[np.int64]:
-        """Return labels of units that may have the same partners, each other left aside.
+        """Return labels of units (of one side) that may have the same partners, each other left aside.
 
         Two such units may either have each other (rows equal with the diagonal filled) or not (with it empty); no unit
         is alike to others in both ways, because `may` is symmetric.
@@ -101,7 +101,8 @@ class Pairing(OutcomeKind):
             labels.append(row_labels(rows))
         plain, filled = labels
         shared = np.bincount(filled)[filled] > 1
-        return row_labels(np.stack([shared, np.where(shared, filled, plain)], axis=1).astype(np.int64))
+        side = np.zeros(self.units, np.int64) if self.side is None else self.side
+        return row_labels(np.stack([shared, np.where(shared, filled, plain), side], axis=1).astype(np.int64))
 
     def possible(self) -> Mask:
         """Return the cells that the kind itself allows: partners of the other side, single only where one is left."""

@@ -292,6 +292,9 @@ class _ServingTrace(Trace):
 
     def find(self, level: int, row: Rows) -> tuple[int, list[int]]:
         slot, turn = self._process.turn(level)
+        at = self._process.states.of_slot[slot]
+        if any((at[state].on if row[unit, slot] else at[state].off) < 0 for unit, state in enumerate(self._state)):
+            raise ValueError("this outcome cannot come from this process")
         units = [unit for unit, state in enumerate(self._state) if state == turn and row[unit, slot]]
         return len(units), units
 

@@ -93,16 +93,17 @@ class Apart(Rule):
         name = self._kind.name
         inside = np.zeros(self._kind.units + 1, bool)
         inside[group] = True
+        good: Mask
         if name == SELECTION:
-            good: Mask = np.less_equal(inside[rows].sum(axis=1), 1)
+            good = inside[rows].sum(axis=1) <= 1
         elif name == ROSTER:
             good = (rows[:, group].sum(axis=1) <= 1).all(axis=1)
         elif name == ASSIGNMENT:
             places = np.sort(rows[:, group], axis=1)
-            good = ~np.equal(places[:, 1:], places[:, :-1]).any(axis=1)
+            good = np.asarray((places[:, 1:] > places[:, :-1]).all(axis=1), bool)
         elif name == ORDER:
             member = inside[rows]
-            good = ~(member[:, 1:] & member[:, :-1]).any(axis=1)
+            good = np.logical_not((member[:, 1:] & member[:, :-1]).any(axis=1))
         else:
             partner = rows[:, group]
             good = ~(inside[partner] & (partner != group)).any(axis=1)
@@ -133,12 +134,14 @@ class Apart(Rule):
         if self._kind.name == ORDER:
             return [_Neighbours(self._setting.group_labels(self._groups)[first], self._groups, first)]
         parts: list[Part] = []
+        spread = self._kind.name == ASSIGNMENT
         for group in self._groups:
             inside = np.isin(first, group).astype(np.int64)
             for place in range(len(self._kind.places.ids)):
                 weights = np.zeros((len(members), len(self._kind.places.ids)), np.int64)
                 weights[:, place] = inside
-                parts.append(Count(weights, None, 1))
+                # the others of the group need a place each, so few places can do without one of it
+                parts.append(Count(weights, len(group) - len(self._kind.places.ids) + 1 if spread else None, 1))
         return parts
 
     def cells(self) -> tuple[Mask, Mask] | None:

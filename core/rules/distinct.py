@@ -90,7 +90,7 @@ class Distinct(Rule):
         plural = "" if self._fields.min == 1 else "s"
         what = f"at least {self._fields.min} different value{plural} of {self._fields.column}"
         if self._kind.name == SELECTION:
-            return f"{what.capitalize()} {'is' if self._fields.min == 1 else 'are'} drawn."
+            return f"{what[0].upper()}{what[1:]} {'is' if self._fields.min == 1 else 'are'} drawn."
         return f"Each place has {what}."
 
     def figure(self, row: Rows) -> str:

@@ -89,7 +89,7 @@ class Run(Rule):
         good = np.ones(len(rows), bool)
         for begin in range(slots - length + 1):
             whole = streak[..., begin : begin + length].all(axis=-1)
-            good &= ~whole.reshape(len(rows), -1).any(axis=1)
+            good &= ~whole.any(axis=tuple(range(1, whole.ndim)))
         return good
 
     def words(self) -> str:

@@ -104,7 +104,8 @@ class Together(Rule):
     def words(self) -> str:
         """Return for example "Either all of p1 and p2 are drawn or none."."""
         if self._alike is not None:
-            return _WORDS[self._kind.name].format(group=f"the units of each {self._alike}").capitalize()
+            words = _WORDS[self._kind.name].format(group=f"the units of each {self._alike}")
+            return words[0].upper() + words[1:]
         told = [
             _WORDS[self._kind.name].format(group=self._setting.unit_words(group.tolist())) for group in self._groups
         ]

@@ -130,6 +130,14 @@ class Diagram:
 
     # -- exact integers ---------------------------------------------------------------------------------------
 
+    def links(self, level: int) -> tuple[NDArray[np.int32], NDArray[np.int32], NDArray[np.int16], NDArray[np.int32]]:
+        """Return source, child, event and pool of each edge of the level, by source and then by event; not to be changed.
+
+        Each node of the level is the source, each node of the next level the child of at least one edge.
+        """
+        layer = self._layers[level]
+        return layer.source, layer.child, layer.event, layer.pool
+
     def options(self, level: int) -> NDArray[np.object_]:
         """Return binomial(pool, count) of each edge of the level as Python integers."""
         layer = self._layers[level]
@@ -298,6 +306,7 @@ class Diagram:
         The chance of an edge is measured on `choose` itself: the words that lead to it, found by bisection.
         """
         law = []
+        measured: dict[tuple[int, int], int] = {}
         for path in self.paths():
             chance = self.acceptance(path)
             options, node, events = 1, 0, []
@@ -305,7 +314,9 @@ class Diagram:
                 layer = self._layers[level]
                 event = int(layer.event[edge])
                 options *= comb(int(layer.pool[edge]), self.process.levels[level].events[event].count)
-                chance *= Fraction(self._measure(level, node, edge), 1 << 64)
+                if (level, edge) not in measured:
+                    measured[level, edge] = self._measure(level, node, edge)
+                chance *= Fraction(measured[level, edge], 1 << 64)
                 events.append(event)
                 node = int(layer.child[edge])
             law.append((events, options, chance / options))

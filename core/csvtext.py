@@ -78,8 +78,10 @@ class _Survey:
         self.data = data
         self.array = np.frombuffer(data, np.uint8)
         self.separator = ord(separator)
-        self.low = self.highest = 0
-        self.spaced = data.endswith(b" ")
+        self.highest = 0
+        self.doubtful = False
+        # In quotes a tab that separates elsewhere may begin or end a cell.
+        self.spaced = data.endswith(b" ") or (separator == "\t" and b'"' in data)
         self._spare = tuple(np.empty(_PIECE, np.bool_) for _ in range(3))
 
     def pieces(self) -> Iterator[tuple[int, NDArray[np.uint8]]]:
@@ -97,15 +99,27 @@ class _Survey:
         """Return where `piece` holds `byte`, in the spare array `number` (0 or 1)."""
         return np.equal(piece, byte, out=self._spare[number][: piece.size])
 
-    def look(self, piece: NDArray[np.uint8], marks: NDArray[np.bool_]) -> None:
-        """Note low and high bytes, and spaces beside `marks` (spare array 0; 1 and 2 are overwritten)."""
+    def look(self, piece: NDArray[np.uint8], marks: NDArray[np.bool_], newlines: _Offsets) -> None:
+        """Note low and high bytes, and spaces beside marks.
+
+        `marks` is spare array 0 (1 and 2 are overwritten), `newlines` the offsets of all newlines in the piece.
+        """
         one, two = (spare[: piece.size] for spare in self._spare[1:])
-        self.low += int(np.count_nonzero(np.less(piece, _SPACE, out=one)))
         self.highest = max(self.highest, int(piece.max()))
+        # What is left of the low bytes besides newlines, carriage returns before them, and separators.
+        low = int(np.count_nonzero(np.less(piece, _SPACE, out=one))) - newlines.size
+        if low:
+            returns = newlines[newlines > 0] - 1
+            returns = returns[piece[returns] == _RETURN]
+            low -= returns.size
+            self.spaced |= bool((piece[returns - 1] == _SPACE).any())
+        if low and self.separator == _TAB:
+            low -= int(np.count_nonzero(np.equal(piece, _TAB, out=one)))
+        self.doubtful |= low > 0
         if not self.spaced:
             space = np.equal(piece, _SPACE, out=one)
-            before = np.logical_and(marks[1:], space[:-1], out=two[1:])
-            self.spaced = bool(before.any()) or bool(np.logical_and(marks[:-1], space[1:], out=two[1:]).any())
+            beside = np.logical_or(marks[2:], marks[:-2], out=two[2:])
+            self.spaced = bool(np.logical_and(beside, space[1:-1], out=beside).any())
 
     def layout(self, ends: _Offsets, cells: _Offsets, newlines: _Offsets, quotes: _Offsets) -> Layout:
         """Return the layout; `ends` may lack the last record's."""
@@ -116,16 +130,9 @@ class _Survey:
             lines = np.searchsorted(newlines, np.concatenate((np.zeros(1, np.int64), ends[:-1] + 1))) + 1
         else:
             lines = np.arange(1, ends.size + 1)
-        returns = 0
-        if self.low != newlines.size:
-            before = newlines[newlines > 0] - 1
-            before = before[self.array[before] == _RETURN]
-            returns = before.size
-            self.spaced |= bool((self.array[before - 1] == _SPACE).any())
         # A tab that does not separate is in doubt as well; it and a quoted newline may begin or end a cell.
-        doubtful = self.low != newlines.size + returns
-        self.spaced |= doubtful or broken
-        return Layout(ends, cells, lines, newlines, quotes, broken, self.spaced, doubtful, self.highest)
+        spaced = self.spaced or self.doubtful or broken
+        return Layout(ends, cells, lines, newlines, quotes, broken, spaced, self.doubtful, self.highest)
 
 
 def layout_of(data: bytes, separator: str) -> Layout:
@@ -153,7 +160,7 @@ def _regular_layout(data: bytes, separator: str) -> Layout | None:
         marks = survey.where(piece, survey.separator, 0)
         separators = np.flatnonzero(marks)
         np.logical_or(marks, newline, out=marks)
-        survey.look(piece, marks)
+        survey.look(piece, marks, ends)
         if not ends.size and base == len(data) - len(rest):
             break
         if separators.size != ends.size * (width - 1):
@@ -178,9 +185,9 @@ def _general_layout(data: bytes, separator: str) -> Layout:
         hits = survey.where(piece, survey.separator, 0)
         for byte in (_NEWLINE, _QUOTE):
             np.logical_or(hits, survey.where(piece, byte, 1), out=hits)
-        survey.look(piece, hits)
         marks = np.flatnonzero(hits)
         kinds = piece[marks]
+        survey.look(piece, hits, marks[kinds == _NEWLINE])
         marks += base
         is_quote = kinds == _QUOTE
         outside = (np.cumsum(is_quote) + quotes_seen) & 1 == 0
