@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import io
 import json
 import os
 import sys
@@ -11,28 +12,35 @@ import threading
 import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, NoReturn, TypeVar
 
-from core.errors import Cancelled, Infeasible, LotwrightError
+from core.errors import CallError, Cancelled, Infeasible, LotwrightError
 
 T = TypeVar("T")
 PATIENCE = 0.12
+DEBUG = "LOTWRIGHT_DEBUG"
+_BUG = (
+    "Something went wrong inside the program; this is its mistake, not yours ({}: {}).\n"
+    f"Please report it, with the sheet if you can. With {DEBUG}=1 in the environment the place of the mistake is shown."
+)
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run the command line; return the exit code.
 
     0 done; 1 `check`: a rule does not hold; 2 the sheet or call is wrong; 3 proved impossible; 4 stopped at a limit;
-    5 a record does not verify or a frozen file has changed; 130 cancelled.
+    5 a record does not verify or a frozen file has changed; 70 a mistake in the program; 130 cancelled.
     """
-    parser = _parser()
-    call = parser.parse_args(arguments)
-    if call.job is None:
-        parser.print_help()
-        return 0
-    face = _Face(json=bool(getattr(call, "json", False)))
+    face = _Face()
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            # a terminal that cannot show a sign gets its number instead of an error
+            stream.reconfigure(errors="backslashreplace")
     try:
+        call = _parsed(sys.argv[1:] if arguments is None else list(arguments))
+        face.json = bool(getattr(call, "json", False))
         code: int = _interruptible(lambda: call.job(call, face), face)
+        sys.stdout.flush()
     except LotwrightError as error:
         face.fail(error)
         code = error.exit_code
@@ -40,10 +48,27 @@ def main(arguments: Sequence[str] | None = None) -> int:
         print("There is not enough memory for this. Lower --memory.", file=sys.stderr)
         code = 2
     except BrokenPipeError:
-        with contextlib.suppress(OSError):
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _drop_output()
         code = 0
+    except OSError as error:
+        from core.files import cause
+
+        if error.filename is None:
+            _drop_output()
+        print(f"{error.filename or 'The output'} cannot be read or written: {cause(error)}.", file=sys.stderr)
+        code = 2
+    except Exception as error:
+        if DEBUG in os.environ:
+            raise
+        print(_BUG.format(type(error).__name__, error), file=sys.stderr)
+        code = 70
     return code
+
+
+def _drop_output() -> None:
+    """Let what could not be written go, or it would fail a second time when the program ends."""
+    with contextlib.suppress(OSError, ValueError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _interruptible(job: Callable[[], T], face: _Face) -> T:
@@ -78,8 +103,8 @@ def _interruptible(job: Callable[[], T], face: _Face) -> T:
 class _Face:
     """How the command line speaks."""
 
-    def __init__(self, *, json: bool) -> None:
-        self.json = json
+    def __init__(self) -> None:
+        self.json = False
         self.cancel = threading.Event()
         self._began = time.monotonic()
         self._told = 0.0
@@ -113,7 +138,8 @@ class _Face:
         """Print a result: as JSON if that was asked for, else as lines."""
         if self._bar and self._told:
             print(file=sys.stderr)
-        print(json.dumps(_safe(value), indent=1, ensure_ascii=False) if self.json else "\n".join(lines))
+        plain = "utf" not in (sys.stdout.encoding or "").lower()
+        print(json.dumps(_safe(value), indent=1, ensure_ascii=plain) if self.json else "\n".join(lines))
 
     def remark(self, lines: Sequence[str]) -> None:
         """Print remarks on the sheet to stderr."""
@@ -155,17 +181,28 @@ def _duration(seconds: float) -> str:
 
 def _plan(call: argparse.Namespace, face: _Face) -> int:
     from core import jobs
-    from core.files import json_bytes, open_sheet, write_whole
+    from core.files import json_bytes, open_sheet, refuse_other, write_whole
     from core.planner import make_plan
 
+    if call.to is not None:
+        refuse_other(call.to, "plan", "arrangement")
     sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
     face.remark(sheet.notices)
     made = make_plan(sheet, outcomes=call.outcomes, memory=call.memory, tick=face.tick)
     if call.to is not None:
         write_whole(call.to, json_bytes(made.plan.to_json()))
     told = jobs.forecast(made)
-    face.show(told, _plan_lines(sheet, made, told))
+    face.show(_numbers(told), _plan_lines(sheet, made, told))
     return 0
+
+
+def _numbers(told: dict[str, Any]) -> dict[str, Any]:
+    """Return a forecast with its sizes, which are kept as text, as integers."""
+
+    def whole(table: dict[str, Any]) -> dict[str, Any]:
+        return {key: int(v) if isinstance(v, str) and v.isdecimal() else v for key, v in table.items()}
+
+    return {**told, "superset": whole(told["superset"]), "admissible": whole(told["admissible"])}
 
 
 def _plan_lines(sheet: Any, made: Any, told: dict[str, Any]) -> list[str]:
@@ -230,7 +267,7 @@ def _draw(call: argparse.Namespace, face: _Face) -> int:
         "outcomes_file": str(result.outcomes_file),
         "record": str(result.record_file),
     }
-    face.show(told, _draw_lines(result))
+    face.show(_numbers(told), _draw_lines(result))
     return 0
 
 
@@ -269,8 +306,30 @@ def _chances(call: argparse.Namespace, face: _Face) -> int:
     face.remark(sheet.notices)
     made = make_plan(sheet, outcomes=10_000, memory=call.memory, tick=face.tick)
     told = inclusion(made, cells=call.cells, pairs=call.pairs, limit=call.limit, tick=face.tick)
-    face.show(told.to_json(), told.lines())
+    face.show(told.to_json(), _chance_lines(sheet, told))
     return 0
+
+
+def _chance_lines(sheet: Any, told: Any, most: int = 40) -> list[str]:
+    """Return the chances as lines: the largest first, of long lists only the ends."""
+    lines = [sheet.title or sheet.name, sheet.kind.words(), "", told.words]
+    for head, chances in (("Units", told.units), ("Cells", told.cells), ("Pairs", told.pairs)):
+        if chances is None:
+            continue
+        ordered = sorted(chances, key=lambda chance: (-chance.estimate, chance.name))
+        shown = ordered if len(ordered) <= most else [*ordered[: most // 2], None, *ordered[-most // 2 :]]
+        lines += ["", head]
+        for chance in shown:
+            if chance is None:
+                lines.append(f"  ... {len(ordered) - most:,} more (all of them with --json)")
+                continue
+            figure = f"{chance.estimate:.6g}"
+            if chance.exact is not None and chance.exact.denominator > 1:
+                figure += f"  = {chance.exact}" if len(str(chance.exact)) <= 24 else "  (exact)"
+            elif chance.exact is None:
+                figure += f"  between {chance.low:.4g} and {chance.high:.4g}"
+            lines.append(f"  {' '.join(chance.name):<24}{figure}")
+    return [*lines, "", *told.notes]
 
 
 def _check(call: argparse.Namespace, face: _Face) -> int:
@@ -283,8 +342,12 @@ def _check(call: argparse.Namespace, face: _Face) -> int:
         head = f"outcome {item['outcome']}, " if several else ""
         figure = f" Found: {item['found']}." if item.get("found") else ""
         lines.append(f"{'holds' if item['holds'] else 'BROKEN':<7}{head}{item['id']}: {item['words']}{figure}")
+    broken = sum(not item["holds"] for item in told)
+    lines.append(
+        f"{broken} of {len(told)} do{'es' if broken == 1 else ''} not hold." if broken else "Every rule holds."
+    )
     face.show({"rules": told}, lines)
-    return 0 if all(item["holds"] for item in told) else 1
+    return 1 if broken else 0
 
 
 def _freeze(call: argparse.Namespace, face: _Face) -> int:
@@ -310,7 +373,9 @@ def _freeze(call: argparse.Namespace, face: _Face) -> int:
 
 def _verify(call: argparse.Namespace, face: _Face) -> int:
     from core import jobs
+    from core.files import read_record
 
+    read_record(call.record)
     if call.independent:
         from core.sceptic import examine
 
@@ -350,11 +415,52 @@ def _explain(call: argparse.Namespace, face: _Face) -> int:
 # -- the parser -----------------------------------------------------------------------------------------------------
 
 
-def _parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(
+class _Parser(argparse.ArgumentParser):
+    """A parser whose errors are like all others: one sentence, no usage before it."""
+
+    def error(self, message: str) -> NoReturn:
+        """Raise what argparse found, in words."""
+        for begin, words in (("argument ", ""), ("the following arguments are required: ", "This is missing: ")):
+            if message.startswith(begin):
+                message = words + message.removeprefix(begin)
+        message = message.replace("expected one argument", "a value must follow")
+        raise CallError(f"{message}. See: {self.prog} --help")
+
+
+def _parsed(arguments: list[str]) -> argparse.Namespace:
+    """Return the call; CallError if it is none, naming what is nearest to a word that is not known."""
+    from core.frame import nearest
+
+    parser, jobs = _parser()
+    first = arguments[0] if arguments else "--help"
+    if not first.startswith("-") and first not in jobs:
+        raise CallError(_unknown("job", first, list(jobs), nearest(first, jobs), "lotwright"))
+    call, rest = parser.parse_known_args(arguments or ["--help"])
+    if rest or call.job is None:
+        options = sorted(jobs[first]._option_string_actions) if first in jobs else ["--help"]
+        word = rest[0].split("=")[0] if rest else first
+        prog = f"lotwright {first}" if first in jobs else "lotwright"
+        if not word.startswith("-"):
+            raise CallError(f"There is a word too many. Found: {word}. See: {prog} --help")
+        known = [option for option in options if option.startswith("--")]
+        near = next((option for option in known if option.startswith(word)), nearest(word, known))
+        raise CallError(_unknown("option", word, known, near, prog))
+    return call
+
+
+def _unknown(what: str, word: str, known: Sequence[str], near: str, prog: str) -> str:
+    allowed = f" Allowed: {', '.join(known)}." if known else ""
+    meant = f" Did you mean {near}?" if near else ""
+    return f"There is no such {what}. Found: {word}.{allowed}{meant} See: {prog} --help"
+
+
+def _parser() -> tuple[_Parser, dict[str, argparse.ArgumentParser]]:
+    """Return the parser, and those of the jobs by name."""
+    parser = _Parser(
         prog="lotwright",
         description="Draws one outcome out of all that satisfy the rules, each with exactly the same chance.",
         epilog="Example: lotwright draw sheet.toml --seed '4 0 7 1 9 3'",
+        allow_abbrev=False,
     )
     parser.set_defaults(job=None)
     jobs = parser.add_subparsers(title="jobs", metavar="JOB")
@@ -397,13 +503,13 @@ def _parser() -> argparse.ArgumentParser:
     explain = one("explain", _explain, "what a rule or a kind means", "lotwright explain quota")
     explain.add_argument("word", nargs="?", metavar="WORD", help="a rule or a kind of outcome")
     explain.add_argument("--json", action="store_true", help="print JSON")
-    return parser
+    return parser, dict(jobs.choices)
 
 
 def _adder(jobs: Any) -> Callable[[str, Callable[..., int], str, str], argparse.ArgumentParser]:
     def add(name: str, job: Callable[..., int], words: str, example: str) -> argparse.ArgumentParser:
         parser: argparse.ArgumentParser = jobs.add_parser(
-            name, help=words, description=f"{words.capitalize()}.", epilog=f"Example: {example}"
+            name, help=words, description=f"{words.capitalize()}.", epilog=f"Example: {example}", allow_abbrev=False
         )
         parser.set_defaults(job=job)
         return parser

@@ -8,11 +8,12 @@ from typing import Any
 import numpy as np
 from pydantic import Field
 
+from core.frame import Table
 from core.kinds import OutcomeKind
 from core.parts import Mask
 from core.process import Rows
-from core.reading import Report, TableFile
-from core.setting import RuleFields, Setting
+from core.reading import Report, TableFile, shown
+from core.setting import RuleFields, Setting, one_of, stopped
 
 Cell = tuple[int, int]
 
@@ -22,8 +23,10 @@ class CellFields(RuleFields):
 
     units: list[str | int] | None = Field(None, description="a list of units")
     cells: list[dict[str, Any]] | None = Field(None, description='a list of cells such as {unit = "p1", slot = "w14"}')
-    file: TableFile | str | None = Field(None, description="a file with a column of units and one of places")
-    in_: list[str | int] | None = Field(None, alias="in", description="a list of slots, places or positions")
+    file: TableFile | str | None = Field(
+        None, description='a file with a column of units and one of slots, places, positions or partners: "leave.csv"'
+    )
+    in_: list[str | int] | None = Field(None, alias="in", description='a list of slots, places or positions: ["w14"]')
 
 
 def read_cells(fields: CellFields, setting: Setting, report: Report) -> tuple[list[int], list[Cell]] | None:
@@ -33,7 +36,7 @@ def read_cells(fields: CellFields, setting: Setting, report: Report) -> tuple[li
     """
     given = [key for key in ("units", "cells", "file") if getattr(fields, key) is not None]
     if len(given) != 1:
-        report.fault("", "one of these must be given.", found=given or None, allowed="units, cells or file")
+        one_of(("units", "cells", "file"), given, report)
         return None
     if fields.units is not None:
         units = setting.units(fields.units, "units", report)
@@ -51,21 +54,19 @@ def read_cells(fields: CellFields, setting: Setting, report: Report) -> tuple[li
 def _from_cells(
     cells: list[dict[str, Any]], word: str, setting: Setting, report: Report
 ) -> tuple[list[int], list[Cell]] | None:
-    wanted = {"unit", word} if word else {"unit"}
-    for cell in cells:
-        if set(cell) != wanted:
-            report.fault("cells", "a cell has other keys.", found=cell, allowed=" and ".join(sorted(wanted)))
-            return None
+    keys = ("unit", word) if word else ("unit",)
+    before = len(report.faults)
+    for number, cell in enumerate(cells, 1):
+        if set(cell) != set(keys):
+            message = f"cell {number} does not have the keys that it needs here."
+            report.fault("cells", message, found=cell, allowed=" and ".join(keys))
+        if stopped(report, "cells", before):
+            break
     if not cells:
         report.fault("cells", "there is no cell.", allowed="at least one")
+    if len(report.faults) > before:
         return None
-    return _resolved(
-        [cell["unit"] for cell in cells],
-        [cell[word] for cell in cells] if word else None,
-        "cells",
-        setting,
-        report,
-    )
+    return _resolved([[cell[key] for key in keys] for cell in cells], None, keys, setting, report)
 
 
 def _from_file(
@@ -74,43 +75,53 @@ def _from_file(
     table = setting.table(file, "file", report)
     if table is None:
         return None
-    column = setting.frame.id if setting.frame.id in table.columns else "unit"
-    if column not in table.columns:
+    unit = setting.frame.id if setting.frame.id in table.columns else "unit"
+    if unit not in table.columns:
         allowed = f"{setting.frame.id} or unit"
         report.fault("file", f"{table.name} has no column of units.", found=", ".join(table.columns), allowed=allowed)
         return None
-    second = table.text(word) if word and word in table.columns else None
-    if second is None and len(table.columns) > 1:
-        report.fault("file", f"{table.name} has no column {word}.", found=", ".join(table.columns), allowed=word)
+    if len(table.columns) == 1:
+        return _resolved([[name] for name in table.text(unit)], table, (unit,), setting, report)
+    if word not in table.columns:
+        message = f"{table.name} has no column {word}." if word else f"{table.name} has more columns than one."
+        allowed = f"{unit} and {word}" if word else unit
+        report.fault("file", message, found=", ".join(table.columns), allowed=allowed)
         return None
-    return _resolved(table.text(column), second, "file", setting, report)
+    lines = list(zip(table.text(unit), table.text(word), strict=True))
+    return _resolved(lines, table, (unit, word), setting, report)
 
 
 def _resolved(
-    names: Sequence[object], seconds: Sequence[object] | None, key: str, setting: Setting, report: Report
+    lines: Sequence[Sequence[object]], table: Table | None, columns: Sequence[str], setting: Setting, report: Report
 ) -> tuple[list[int], list[Cell]] | None:
+    """Return the units, or the cells, that lines of one or two names mean; None after reporting faults.
+
+    The lines stand in columns of a table, or are the keys of cells in the sheet.
+    """
     before = len(report.faults)
-    if seconds is None:
-        units = setting.units(names, key, report)
-        return None if units is None else (units.tolist(), [])
-    cells: list[Cell] = []
-    for name, second in zip(names, seconds, strict=True):
-        unit = setting.units([name], key, report)
-        if setting.kind.name == "pairing":
-            partner = setting.units([second], key, report)
-            place: tuple[int, ...] | None = None if partner is None else (int(partner[0]),)
+    units: dict[int, None] = {}
+    cells: dict[Cell, None] = {}
+    pairing = setting.kind.name == "pairing"
+    for row, names in enumerate(lines):
+        ats = [report if table is None else report.line(table, row, column) for column in columns]
+        key = "cells" if table is None else ""
+        unit = setting.unit(names[0], key, ats[0])
+        if len(names) == 1:
+            if unit is not None and unit in units:
+                ats[0].fault(key, "this unit is named twice.", found=names[0])
+            elif unit is not None:
+                units[unit] = None
         else:
-            place = setting.in_places([second], key, report)
-        if unit is None or place is None:
-            continue
-        cell = (int(unit[0]), place[0])
-        if cell in cells:
-            report.fault(key, "this cell is named twice.", found=f"{name}, {second}")
-        elif setting.kind.name == "pairing" and cell[0] == cell[1]:
-            report.fault(key, "a unit cannot be its own partner.", found=name)
-        else:
-            cells.append(cell)
-    return ([], cells) if len(report.faults) == before else None
+            second = setting.unit(names[1], key, ats[1]) if pairing else setting.in_place(names[1], key, ats[1])
+            if unit is not None and second is not None:
+                if (unit, second) in cells:
+                    ats[1].fault(key, "this cell is named twice.", found=f"{shown(names[0])}, {shown(names[1])}")
+                elif pairing and unit == second:
+                    ats[1].fault(key, "a unit cannot be its own partner.", found=names[0])
+                cells[unit, second] = None
+        if stopped(report, key or "file", before):
+            break
+    return (list(units), list(cells)) if len(report.faults) == before else None
 
 
 def holds(kind: OutcomeKind, rows: Rows, cell: Cell) -> Mask:

@@ -15,7 +15,7 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
-from core.errors import BrokenSeal
+from core.errors import BrokenSeal, CallError
 from core.sheet import canonical_json, digest_of
 
 NOTHING = "0" * 64
@@ -34,10 +34,16 @@ class DrawBook:
         ------
         BrokenSeal
             naming the first line that does not fit.
+        CallError
+            if the file cannot be read.
         """
         if not self.path.exists():
             return []
-        return self._parsed(self.path.read_bytes())[0]
+        try:
+            raw = self.path.read_bytes()
+        except OSError as error:
+            raise CallError(f"{self.path} cannot be read: {_cause(error)}.") from None
+        return self._parsed(raw)[0]
 
     def _parsed(self, raw: bytes) -> tuple[list[dict[str, Any]], int]:
         entries: list[dict[str, Any]] = []
@@ -58,7 +64,16 @@ class DrawBook:
         return entries, good
 
     def append(self, content: dict[str, Any]) -> dict[str, Any]:
-        """Add an entry and return it with its number and hash; other programs wait meanwhile."""
+        """Add an entry and return it with its number and hash; other programs wait meanwhile.
+
+        Raises BrokenSeal as `entries` does, CallError if the file cannot be written.
+        """
+        try:
+            return self._append(content)
+        except OSError as error:
+            raise CallError(f"{self.path} cannot be written: {_cause(error)}.") from None
+
+    def _append(self, content: dict[str, Any]) -> dict[str, Any]:
         with self.path.open("a+b") as file, _locked(file.fileno()):
             file.seek(0)
             entries, good = self._parsed(file.read())
@@ -74,7 +89,7 @@ class DrawBook:
 def _entry(line: bytes) -> dict[str, Any] | None:
     try:
         value = json.loads(line)
-    except ValueError:
+    except (ValueError, RecursionError):
         return None
     if not isinstance(value, dict):
         return None
@@ -82,6 +97,10 @@ def _entry(line: bytes) -> dict[str, Any] | None:
     if claimed != digest_of(value) or canonical_json({**value, "hash": claimed}).encode() + b"\n" != line:
         return None
     return {**value, "hash": claimed}
+
+
+def _cause(error: OSError) -> str:
+    return (error.strerror or str(error)).lower()
 
 
 @contextmanager

@@ -13,15 +13,16 @@ import os
 import pickle
 import signal
 import threading
-from collections import deque
 from collections.abc import Callable, Generator, Iterator
-from concurrent.futures import Future, ProcessPoolExecutor
 from dataclasses import dataclass
-from typing import Any, Protocol
+from multiprocessing import resource_tracker
+from multiprocessing.connection import Connection, wait
+from multiprocessing.context import SpawnProcess
+from typing import Any, Protocol, cast
 
 import numpy as np
 
-from core.errors import Cancelled
+from core.errors import CallError, Cancelled
 from core.ledger import Count, Ledger
 from core.planner import Ready
 from core.process import Rows
@@ -30,7 +31,10 @@ from core.stream import Bits
 
 # So many proposals of each block are put to every check, for the ledger's "any" and "alone".
 SAMPLE = 64
+# So many blocks per worker are made ahead of the one whose turn it is.
 AHEAD = 3
+# Seconds between two looks at `cancelled` while workers are busy.
+LOOK = 0.02
 
 
 @dataclass(frozen=True)
@@ -98,18 +102,21 @@ def draw(
     journal
         Where finished blocks are kept, and where an earlier attempt is read from.
     cancelled
-        Asked between blocks.
+        Asked between blocks, and while workers are busy.
 
     Raises
     ------
     Cancelled
         if `cancelled` says so or Ctrl-C was pressed; finished blocks are in the journal.
+    CallError
+        if a worker process was ended from outside; finished blocks are in the journal.
     """
     tray = _Tray(ready, wanted, limit)
     for entry in journal.blocks() if journal is not None else ():
-        tray.restore(entry)
+        if not tray.restore(entry):
+            break
     on_progress(tray.progress())
-    blocks = _blocks(ready, key, tray, workers)
+    blocks = _blocks(ready, key, tray, workers, cancelled)
     try:
         while not tray.full():
             if cancelled():
@@ -171,13 +178,17 @@ class _Tray:
             "ledger": _flat(block.ledger(self._ids)),
         }
 
-    def restore(self, entry: dict[str, Any]) -> None:
-        """Add a block that was kept."""
+    def restore(self, entry: dict[str, Any]) -> bool:
+        """Add a block that was kept; return False, adding nothing, if it goes beyond the limit."""
+        ledger = _unflat(entry["ledger"])
+        if self._limit is not None and self._ledger.proposed + ledger.proposed > self._limit:
+            return False
         rows = np.frombuffer(base64.b64decode(entry["rows"]), dtype=np.dtype(entry["type"])).reshape(entry["shape"])
         self._rows.append(rows)
         self._addresses += [(entry["block"], place) for place in entry["places"]]
-        self._ledger.add(_unflat(entry["ledger"]))
+        self._ledger.add(ledger)
         self.next_block = entry["block"] + 1
+        return True
 
     def progress(self) -> Progress:
         return Progress(self._ledger.proposed, len(self._addresses), self._wanted)
@@ -205,7 +216,12 @@ def _unflat(value: dict[str, Any]) -> Ledger:
     return Ledger(proposed, accepted, weighting, sampled, passed, rules)
 
 
-def _blocks(ready: Ready, key: bytes, tray: _Tray, workers: int) -> Generator[Block, None, None]:
+Job = tuple[Any, Any, bytes, int]
+
+
+def _blocks(
+    ready: Ready, key: bytes, tray: _Tray, workers: int, cancelled: Callable[[], bool]
+) -> Generator[Block, None, None]:
     """Yield blocks in the order of their numbers, from the tray's next on."""
     job = (ready.diagram, ready.checks, key, ready.plan.block)
     number = tray.next_block
@@ -213,21 +229,25 @@ def _blocks(ready: Ready, key: bytes, tray: _Tray, workers: int) -> Generator[Bl
         while True:
             yield _one(job, number)
             number += 1
-    context = multiprocessing.get_context("spawn")
-    with ProcessPoolExecutor(workers, context, _begin, (pickle.dumps(job),)) as pool:
-        waiting: deque[Future[Block]] = deque()
-        try:
-            while True:
-                while len(waiting) < AHEAD * workers:
-                    waiting.append(pool.submit(_worker, number))
-                    number += 1
-                yield waiting.popleft().result()
-        finally:
-            pool.shutdown(wait=True, cancel_futures=True)
-
-
-Job = tuple[Any, Any, bytes, int]
-_job: Job | None = None
+    with _started(job, workers) as pipes:
+        given, found = number, dict[int, Block | Exception]()
+        free = pipes * 2  # a worker has the next number before it is done with one
+        while True:
+            while number not in found:
+                while free and given < number + AHEAD * workers:
+                    free.pop().send(given)
+                    given += 1
+                for pipe in cast(list[Connection], wait(pipes, LOOK)):
+                    made, block = pipe.recv()
+                    found[made] = block
+                    free.append(pipe)
+                if cancelled():
+                    raise Cancelled(tray.state())
+            next_block = found.pop(number)
+            if isinstance(next_block, Exception):
+                raise next_block
+            yield next_block
+            number += 1
 
 
 def _one(job: Job, number: int) -> Block:
@@ -235,22 +255,79 @@ def _one(job: Job, number: int) -> Block:
     return run_block(diagram, checks, Bits(key, number), size, SAMPLE)
 
 
-def _begin(packed: bytes) -> None:
-    """Prepare a worker process: it leaves Ctrl-C to its parent, and ends when its parent does."""
-    global _job
+@contextlib.contextmanager
+def _started(job: Job, count: int) -> Iterator[list[Connection]]:
+    """Start worker processes; yield the pipe to each. At the end nobody waits for blocks that are not wanted any more.
+
+    Each worker has a pipe of its own and shares nothing with the others: so it can be ended at any moment, and nothing is
+    left behind if it is the program itself that is ended.
+    """
+    context = multiprocessing.get_context("spawn")
+    packed = pickle.dumps(job)
+    processes: list[SpawnProcess] = []
+    pipes: list[Connection] = []
+    try:
+        with _deaf():
+            for _ in range(count):
+                mine, theirs = context.Pipe()
+                pipes.append(mine)
+                process = context.Process(target=_serve, args=(theirs,), daemon=True)
+                process.start()
+                processes.append(process)
+                theirs.close()
+        for pipe in pipes:
+            pipe.send_bytes(packed)
+        yield pipes
+    except (EOFError, OSError):
+        raise CallError(
+            "A worker process could not be started or was ended from outside; often there is not enough memory for it. "
+            "Finished blocks are kept: go on with --resume, and with fewer --workers."
+        ) from None
+    finally:
+        for process in processes:
+            process.kill()
+        for process in processes:
+            process.join()
+        for pipe in pipes:
+            pipe.close()
+
+
+@contextlib.contextmanager
+def _deaf() -> Iterator[None]:
+    """Start processes that do not hear Ctrl-C, not even while they begin: answering it is left to their parent."""
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    resource_tracker.ensure_running()  # to start it later would undo what follows
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
+def _serve(pipe: Connection) -> None:
+    """Make blocks in a worker process, which ends with its parent."""
     with contextlib.suppress(ValueError):
         signal.signal(signal.SIGINT, signal.SIG_IGN)
+    threading.Thread(target=_end_with_parent, daemon=True).start()
+    with contextlib.suppress(EOFError, OSError):  # the parent is gone
+        job: Job = pickle.loads(pipe.recv_bytes())
+        while True:
+            number = pipe.recv()
+            pipe.send((number, _attempt(job, number)))
+
+
+def _attempt(job: Job, number: int) -> Block | Exception:
+    """Return the block, or what went wrong: raised in the parent, when it is the block's turn."""
+    try:
+        return _one(job, number)
+    except Exception as error:
+        return error
+
+
+def _end_with_parent() -> None:
     parent = multiprocessing.parent_process()
     if parent is not None:
-        threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
-    _job = pickle.loads(packed)
-
-
-def _end_with(parent: Any) -> None:
-    parent.join()
-    os._exit(1)
-
-
-def _worker(number: int) -> Block:
-    assert _job is not None
-    return _one(_job, number)
+        parent.join()
+        os._exit(1)

@@ -35,7 +35,7 @@ from core.kinds.selection import Selection
 from core.supersets.diagram import Diagram
 
 # Multiplications of exact integers that passes beyond the first two may take (some seconds).
-MOST_STEPS = 40_000_000
+MOST_STEPS = 100_000_000
 
 Exact = NDArray[np.object_]
 Tick = Callable[[], None]

@@ -38,11 +38,12 @@ def _all() -> str:
 
 def _told(word: str, what: str, meaning: str, context: str, fields: type[Fields], example: str) -> str:
     common = RuleFields.model_fields if issubclass(fields, RuleFields) else {}
-    lines = [f"{word} ({what})", meaning, context, "", "Keys"]
+    lines = [f"{word} ({what})", meaning, context, "", "Keys", f'  {"kind":<12}"{word}" (must be given)']
     for name, info in fields.model_fields.items():
         if name not in common and name != "kind":
             must = " (must be given)" if info.is_required() else ""
             lines.append(f"  {info.alias or name:<12}{info.description}{must}")
-    if common:
-        lines.append("  every rule may also have: id, note, off = true, empty = true")
+    for name, info in common.items():
+        if name != "kind":
+            lines.append(f"  {name:<12}{info.description}")
     return "\n".join([*lines, "", "Example", *(f"  {line}" for line in example.splitlines())])

@@ -28,10 +28,12 @@ from core.record import (
     program,
     record_of,
 )
-from core.sheet import Sheet, digest_of
+from core.sheet import Sheet, canonical_json, digest_of
 from core.stream import make_key
+from core.supersets.diagram import OverBudget
 
 JOURNAL = "draw.journal"
+LARGEST_BLOCK = 1 << 16
 
 
 def _go_on() -> None:
@@ -71,7 +73,7 @@ def forecast(made: Ready) -> dict[str, Any]:
         "acceptance": {"estimate": 1.0, "low": 1.0, "high": 1.0}
         if exact
         else {"estimate": ledger.acceptance, "low": low, "high": high},
-        "admissible": admissible(plan, int(made.diagram.weight), ledger),
+        "admissible": admissible(plan, int(made.diagram.weight)),
         "verdict": "possible" if exact or ledger.accepted else "rare or impossible: nothing was accepted in the pilot",
         "plan_digest": plan.digest,
     }
@@ -80,9 +82,46 @@ def forecast(made: Ready) -> dict[str, Any]:
 def read_plan(path: Path) -> Plan:
     """Return the plan in a file."""
     try:
-        return Plan.from_json(read_json(path, "plan"))
-    except (KeyError, TypeError, ValueError) as error:
+        return _plan_from(read_json(path, "plan"))
+    except ValueError as error:
         raise CallError(f"{path.name} is no plan: {error}.") from None
+
+
+def _plan_from(value: Any) -> Plan:
+    """Return the plan that JSON values state; ValueError if they are none."""
+    try:
+        plan = Plan.from_json(value)
+        pilot = pilot_ledger(plan)
+    except KeyError as error:
+        raise ValueError(f"it has no {error.args[0]}") from None
+    except (TypeError, AttributeError, OverflowError) as error:
+        raise ValueError(str(error)) from None
+    if not 1 <= plan.block <= LARGEST_BLOCK:
+        raise ValueError(f"its block must be from 1 to {LARGEST_BLOCK:,}; found {plan.block:,}")
+    if not 0 <= pilot.accepted <= pilot.proposed:
+        raise ValueError("its pilot accepted more than it proposed")
+    if plan.size is not None and not (plan.size.isascii() and plan.size.isdecimal()):
+        raise ValueError("its size is no number")
+    return plan
+
+
+def _built(sheet: Sheet, plan: Plan, tick: Tick) -> Ready:
+    """Return a plan with its superset built again; ValueError naming what stands against it."""
+    try:
+        made = ready(sheet, plan, tick=tick)
+    except (OverBudget, OverflowError):
+        raise ValueError("its superset does not fit in the memory it names") from None
+    if made.diagram.is_empty:
+        raise ValueError("its built-in rules let no outcome through")
+    return made
+
+
+def _told_by_others(sheet: Sheet, plan: Plan, tick: Tick) -> Ready:
+    """Return a plan that only its file vouches for, built again, and its size counted again; ValueError as `_built`."""
+    made = _built(sheet, plan, tick)
+    if plan.size is not None and int(plan.size) != made.diagram.size:
+        raise ValueError("the size it states is not that of its superset")
+    return made
 
 
 def plan_for(sheet: Sheet, outcomes: int, memory: float, plan: Path | None, tick: Tick) -> Ready:
@@ -90,7 +129,7 @@ def plan_for(sheet: Sheet, outcomes: int, memory: float, plan: Path | None, tick
     if plan is None:
         return make_plan(sheet, outcomes=outcomes, memory=memory, tick=tick)
     try:
-        return ready(sheet, read_plan(plan), tick=tick)
+        return _told_by_others(sheet, read_plan(plan), tick)
     except ValueError as error:
         raise CallError(f"{plan.name} cannot be used: {error}.") from None
 
@@ -121,14 +160,16 @@ def freeze(
     made = make_plan(sheet, outcomes=outcomes, memory=memory, tick=tick)
     content = frozen_of(sheet, made.plan)
     target = frozen_path(path)
-    if target.exists() and read_json(target, "frozen sheet").get("digest") == content["digest"]:
+    last = next((e["digest"] for e in reversed(entries) if e["event"] == "freeze"), None)
+    # without its entry the file is what a freeze left that was killed: that is finished now
+    kept = read_json(target, "frozen sheet").get("digest") if target.exists() else None
+    if kept == content["digest"] == last:
         raise CallError(
             f"{path.name} is frozen already, with this very content. Draw from it, or edit the sheet first."
         )
-    supersedes = next((e["digest"] for e in reversed(entries) if e["event"] == "freeze"), None)
     write_whole(target, json_bytes(content))
     entry = book.append(
-        {"event": "freeze", "at": now(), "digest": content["digest"], "supersedes": supersedes, "title": sheet.title}
+        {"event": "freeze", "at": now(), "digest": content["digest"], "supersedes": last, "title": sheet.title}
     )
     return {**content, "entry": entry["entry"], "at": entry["at"], "ready": made}
 
@@ -205,7 +246,7 @@ def draw_to_files(
         if it was stopped; `resume` goes on to the same bytes.
     """
     sheet = open_sheet(wish.sheet, allow_outside=wish.allow_outside)
-    _refuse_finished(wish.folder)
+    _refuse_finished(wish)
     frozen = _frozen(wish.sheet, sheet)
     outcomes = wish.outcomes or (frozen.plan.outcomes if frozen else 1)
     made = _ready(wish, sheet, frozen, outcomes, tick)
@@ -214,7 +255,6 @@ def draw_to_files(
         "plan": made.plan.digest,
         "key": hashlib.sha256(key).hexdigest(),
         "outcomes": outcomes,
-        "limit": wish.limit,
     }
     journal, about = _begun(wish, frozen, identity)
     try:
@@ -231,19 +271,27 @@ def draw_to_files(
         if not drawn.complete:
             raise _too_rare(drawn, outcomes)
         record, data = _recorded(wish, made, drawn, frozen, about)
+        write_whole(wish.folder / "outcomes.csv", data)
+        write_whole(wish.folder / "record.json", json_bytes(record))
+        if frozen is not None:
+            _enter_drawn(book_of(wish.sheet), about["number"], record["digest"])
+        journal.finish()
     except BaseException:
         journal.close()
         raise
-    write_whole(wish.folder / "outcomes.csv", data)
-    write_whole(wish.folder / "record.json", json_bytes(record))
-    if frozen is not None:
-        book_of(wish.sheet).append({"event": "drawn", "at": now(), "draw": about["number"], "record": record["digest"]})
-    journal.finish()
     return Result(record, sheet, made, drawn, wish.folder / "outcomes.csv", wish.folder / "record.json")
 
 
-def _refuse_finished(folder: Path) -> None:
-    if (folder / "record.json").exists():
+def _enter_drawn(book: DrawBook, number: int, record: str) -> None:
+    """Enter a finished draw; once, even if the program was killed after it did so and goes on with the draw."""
+    if not any(entry["event"] == "drawn" and entry["record"] == record for entry in book.entries()):
+        book.append({"event": "drawn", "at": now(), "draw": number, "record": record})
+
+
+def _refuse_finished(wish: Wish) -> None:
+    folder = wish.folder
+    # with a journal beside it, the record is that of a draw that was killed at its very end
+    if (folder / "record.json").exists() and not (wish.resume and (folder / JOURNAL).exists()):
         raise CallError(f"{folder} holds the record of an earlier draw. Choose another folder (--to).")
     if folder.exists() and not folder.is_dir():
         raise CallError(f"{folder} is a file, not a folder. Choose another folder (--to).")
@@ -257,7 +305,7 @@ def _ready(wish: Wish, sheet: Sheet, frozen: _Frozen | None, outcomes: int, tick
     if outcomes != frozen.plan.outcomes:
         raise CallError(f"The sheet is frozen for {frozen.plan.outcomes:,} outcomes. Found: --outcomes {outcomes:,}.")
     try:
-        return ready(sheet, frozen.plan, tick=tick)
+        return _built(sheet, frozen.plan, tick)
     except ValueError as error:
         raise BrokenSeal("library versions", f"The frozen plan cannot be used here: {error}.") from None
 
@@ -267,7 +315,8 @@ def _begun(wish: Wish, frozen: _Frozen | None, identity: Mapping[str, Any]) -> t
     book = book_of(wish.sheet)
     draws = [entry for entry in book.entries() if entry["event"] == "draw"] if frozen else []
     path = wish.folder / JOURNAL
-    going_on = wish.resume and path.exists()
+    entered = bool(draws) and draws[-1]["key"] == identity["key"]
+    going_on = wish.resume and path.exists() and (entered or not frozen)
     number = len(draws) + (0 if going_on else 1)
     if frozen and not going_on and number > 1 and not wish.reason.strip():
         raise CallError(
@@ -281,21 +330,17 @@ def _begun(wish: Wish, frozen: _Frozen | None, identity: Mapping[str, Any]) -> t
     if frozen is None:
         return journal, {"number": 1, "of": 1, "reason": wish.reason or None, "at": now(), "entry": None}
     if going_on:
-        entry = draws[-1] if draws else {}
-        if entry.get("key") != identity["key"]:
-            journal.close()
-            raise CallError("The draw book's last draw is another one; this one cannot be gone on with.")
+        entry = draws[-1]
+    elif next(journal.blocks(), None) is not None:
+        journal.close()
+        raise CallError("The draw book's last draw is another one; this one cannot be gone on with.")
     else:
-        entry = book.append(
-            {
-                "event": "draw",
-                "at": now(),
-                "digest": frozen.digest,
-                "key": identity["key"],
-                "draw": number,
-                "reason": wish.reason or None,
-            }
-        )
+        content = {"event": "draw", "at": now(), "digest": frozen.digest, "key": identity["key"], "draw": number}
+        try:
+            entry = book.append({**content, "reason": wish.reason or None})
+        except BaseException:
+            journal.finish()
+            raise
     about = {"number": number, "of": number, "reason": entry["reason"], "at": entry["at"]}
     return journal, {**about, "entry": {"entry": entry["entry"], "hash": entry["hash"]}}
 
@@ -323,7 +368,7 @@ def _too_rare(drawn: Drawn, outcomes: int) -> TooRare:
     blame = f" Most proposals were rejected first by rule {worst}." if worst else ""
     return TooRare(
         f"Stopped at the limit: {ledger.accepted:,} of {outcomes:,} outcomes accepted in {ledger.proposed:,} proposals. "
-        f"An admissible outcome is rarer than 1 in {1 / bound:,.0f} of the superset (97.5 % sure).{blame} "
+        f"An admissible outcome is rarer than 1 in {int(1 / bound):,} of the superset (97.5 % sure).{blame} "
         "Raise --limit and go on with --resume, give planning more (--outcomes), or loosen a rule.",
         bound,
     )
@@ -377,22 +422,24 @@ def verify(
     part = broken_part(record)
     if part:
         raise BrokenSeal(part, f"The record was changed in the part {part!r}.")
+    plan = _replayable(record)
     path = find_sheet(record_path, record, sheet_path)
     sheet = open_sheet(path, allow_outside=allow_outside)
     _compare_sheet(record, sheet)
-    plan = Plan.from_json(record["plan"])
-    digest = _compare_frozen(record, sheet, path, plan)
+    parties = [(party["name"], party["text"]) for party in record["seed"]["parties"]]
+    digest = _compare_frozen(record, sheet, plan)
+    key = make_key("draw", digest, parties)
+    _compare_book(record, path, key)
     data = _outcomes_data(record_path, record)
     try:
-        made = ready(sheet, plan, tick=tick)
+        made = _told_by_others(sheet, plan, tick)
     except ValueError as error:
         raise BrokenSeal(
             "library versions", f"The plan cannot be replayed here: {error}. {_versions(record)}"
         ) from None
-    parties = [(party["name"], party["text"]) for party in record["seed"]["parties"]]
-    key = make_key("draw", digest, parties)
     drawn = draw(made, key, record["outcomes"]["count"], workers=workers, on_progress=on_progress)
     _compare_drawn(record, data, made, drawn)
+    _compare_facts(record, made, drawn, parties)
     return {
         "record": record_path.name,
         "verified": True,
@@ -402,6 +449,27 @@ def verify(
         "draw": record["draw"]["number"],
         "versions": _versions(record),
     }
+
+
+def _replayable(record: Mapping[str, Any]) -> Plan:
+    """Return the plan of a record that says all that a replay reads; BrokenSeal if it does not."""
+    try:
+        sheet, outcomes, draws = record["sheet"], record["outcomes"], record["draw"]
+        texts = [sheet["file"], sheet["path"], sheet["text"], outcomes["file"], outcomes["sha256"]]
+        texts += [party[key] for party in record["seed"]["parties"] for key in ("name", "text")]
+        texts += [text for file in record["files"] for text in (file["name"], file["sha256"], *file["blocks"])]
+        numbers = [outcomes["count"], draws["number"]]
+        if record["frozen"] is not None:
+            texts += [record["frozen"]["digest"], record["frozen"]["at"], draws["entry"]["hash"]]
+            numbers += [record["frozen"]["entry"], draws["entry"]["entry"]]
+        good = all(isinstance(text, str) for text in texts) and all(isinstance(n, int) and n > 0 for n in numbers)
+        good &= isinstance(record["program"], dict) and "ledger" in record
+        plan = _plan_from(record["plan"])
+    except (KeyError, TypeError, ValueError, AttributeError):
+        good = False
+    if not good:
+        raise BrokenSeal("record", "The record does not say all that a replay needs.")
+    return plan
 
 
 def _compare_sheet(record: Mapping[str, Any], sheet: Sheet) -> None:
@@ -418,27 +486,46 @@ def _compare_sheet(record: Mapping[str, Any], sheet: Sheet) -> None:
             raise BrokenSeal(part, told)
 
 
-def _compare_frozen(record: Mapping[str, Any], sheet: Sheet, path: Path, plan: Plan) -> str:
+def _compare_frozen(record: Mapping[str, Any], sheet: Sheet, plan: Plan) -> str:
     """Return the digest that the key was made from."""
     frozen = record["frozen"]
     if frozen is None:
         return sheet.digest
     if frozen_of(sheet, plan)["digest"] != frozen["digest"]:
         raise BrokenSeal("plan", "What was frozen is not what the record says was drawn from.")
-    entries = book_of(path).entries()
-    for entry in (frozen, record["draw"]["entry"]):
-        number = entry["entry"]
-        if number > len(entries) or entries[number - 1]["hash"] != entry["hash"]:
-            raise BrokenSeal("draw book", f"{book_of(path).path.name} has no entry {number} as the record names it.")
     digest: str = frozen["digest"]
     return digest
+
+
+def _compare_book(record: Mapping[str, Any], path: Path, key: bytes) -> None:
+    """Compare what the record says of freezing and of the draw's number with the draw book."""
+    frozen, told = record["frozen"], record["draw"]
+    if frozen is None:
+        return
+    book = book_of(path)
+    entries = book.entries()
+    found = []
+    for entry in (frozen, told["entry"]):
+        number = entry["entry"]
+        if number > len(entries) or entries[number - 1]["hash"] != entry["hash"]:
+            raise BrokenSeal("draw book", f"{book.path.name} has no entry {number} as the record names it.")
+        found.append(entries[number - 1])
+    freezing, drawing = found
+    if (freezing["event"], drawing["event"]) != ("freeze", "draw"):
+        raise BrokenSeal("draw book", f"The entries of {book.path.name} that the record names tell of something else.")
+    if drawing["key"] != hashlib.sha256(key).hexdigest():
+        raise BrokenSeal("seed", f"{book.path.name} has another seed for this draw than the record.")
+    if any(frozen[part] != freezing[part] for part in ("digest", "at")):
+        raise BrokenSeal("frozen", f"{book.path.name} tells of another freezing than the record.")
+    if (told["number"], told.get("reason"), told.get("at")) != tuple(drawing[p] for p in ("draw", "reason", "at")):
+        raise BrokenSeal("draw", f"{book.path.name} tells of this draw's number, reason or time otherwise.")
 
 
 def _outcomes_data(record_path: Path, record: Mapping[str, Any]) -> bytes:
     path: Path = record_path.resolve().parent / str(record["outcomes"]["file"])
     try:
         return path.read_bytes()
-    except OSError:
+    except (OSError, ValueError):
         raise BrokenSeal("outcome", f"The file {path.name} beside the record cannot be read.") from None
 
 
@@ -453,11 +540,42 @@ def _compare_drawn(record: Mapping[str, Any], data: bytes, made: Ready, drawn: D
             f"outcome number {number}",
             f"{record['outcomes']['file']} differs from the replay in line {line + 1} (outcome {number}).",
         )
-    if hashlib.sha256(data).hexdigest() != record["outcomes"]["sha256"]:
-        raise BrokenSeal("outcome", "The digest of the outcomes is not the one in the record.")
-    addresses = [list(address) for address in drawn.addresses]
-    if addresses != record["outcomes"]["addresses"] or drawn.ledger.proposed != record["ledger"]["proposed"]:
-        raise BrokenSeal("ledger", "The replay made other proposals than the record says.")
+
+
+def _compare_facts(record: Mapping[str, Any], made: Ready, drawn: Drawn, parties: list[Party]) -> None:
+    """Compare the figures of the record, part by part, with those of the replay."""
+    again = record_of(
+        made,
+        drawn,
+        parties,
+        path=record["sheet"]["path"],
+        outcomes_sha256=hashlib.sha256(outcomes_bytes(made.sheet, drawn.rows)).hexdigest(),
+        frozen=record["frozen"],
+        draw=record["draw"],
+    )
+    mine, theirs = _facts(again), _facts(record)
+    for part, value in mine.items():
+        if canonical_json(value) != canonical_json(theirs[part]):
+            raise BrokenSeal(part, f"The part {part!r} of the record does not say what the replay gives.")
+
+
+def _facts(record: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the parts of a record that any version must give alike: not its words, and no interval's last digit."""
+    kept = {part: record.get(part) for part in ("files", "seed", "plan_digest", "outcomes")}
+    for part, keys in _FACTS.items():
+        value = record.get(part)
+        told = value if isinstance(value, list) else [value]
+        kept[part] = [{key: one.get(key) for key in keys} if isinstance(one, dict) else one for one in told]
+    return kept
+
+
+_FACTS = {
+    "sheet": ("digest", "title", "purpose", "basis", "operator", "scrutineer", "published", "seed_from"),
+    "frame": ("units", "id", "totals"),
+    "rules": ("id", "kind", "treatment", "note"),
+    "ledger": ("proposed", "accepted", "weighting", "sampled", "rules"),
+    "admissible": ("exact", "size", "estimate"),
+}
 
 
 def _versions(record: Mapping[str, Any]) -> str:

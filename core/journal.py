@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import json
 from collections.abc import Iterator
@@ -72,16 +73,21 @@ class FileJournal:
 
     def _write(self, value: dict[str, Any]) -> None:
         text = canonical_json(value)
-        self._file.write(f"{_sum(text)} {text}\n".encode())
-        self._file.flush()
+        try:
+            self._file.write(f"{_sum(text)} {text}\n".encode())
+            self._file.flush()
+        except OSError as error:
+            raise CallError(f"{self._path} cannot be written: {(error.strerror or str(error)).lower()}.") from None
 
     def close(self) -> None:
         """Close the file and leave it."""
-        self._file.close()
+        # what could not be written was told of when it was written
+        with contextlib.suppress(OSError):
+            self._file.close()
 
     def finish(self) -> None:
         """Close the file and remove it: the draw is complete."""
-        self._file.close()
+        self.close()
         self._path.unlink(missing_ok=True)
 
 

@@ -12,7 +12,8 @@ WEIGHTING = "weighting"
 def interval(accepted: int, proposed: int, level: float = 0.95) -> tuple[float, float]:
     """Return the Clopper-Pearson interval of a probability.
 
-    Guarantee: covers the true value with at least `level` (Clopper and Pearson 1934). With nothing proposed: (0, 1).
+    Guarantee: covers the true value with at least `level` where `proposed` was fixed beforehand (Clopper and Pearson 1934),
+    and also where it ended at the last acceptance wanted. With nothing proposed: (0, 1).
     """
     from scipy.special import betaincinv  # imported where used: a slow import
 

@@ -11,11 +11,12 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-Columns = NDArray[np.int64]
+Columns = NDArray[Any]
 Mask = NDArray[np.bool_]
 
 
@@ -52,8 +53,9 @@ class Part(ABC):
     def prepare(self, levels: Sequence[Level]) -> None:
         """Find the levels at which this part has something to say."""
         touched = [i for i, level in enumerate(levels) if any(self.concerns(e) for e in level.events)]
-        self.first = touched[0] if touched else 0
-        self.last = touched[-1] if touched else -1
+        # a part that nothing concerns still has its verdict to give: at the first level
+        touched = touched or [0]
+        self.first, self.last = touched[0], touched[-1]
         self.touched = set(touched)
         self.end = len(levels) - 1
 
@@ -131,21 +133,27 @@ class Count(Part):
     def settle(self, level: int, columns: Columns) -> tuple[Columns, Mask | None]:
         """Drop states that cannot end within the bounds; make equal those that cannot end outside."""
         value = columns[0]
+        rest_low, rest_high = self._rest_low[level + 1], self._rest_high[level + 1]
         if self._either is not None:
-            alive = (value == 0) | (value + self._rest_high[level + 1] >= self._either)
+            alive = (value == 0) | (value >= _clipped(self._either - rest_high))
             return columns, alive
         alive = np.ones(value.shape, bool)
         safe = np.ones(value.shape, bool)
         if self._low is not None:
-            alive &= value + self._rest_high[level + 1] >= self._low
-            safe &= value + self._rest_low[level + 1] >= self._low
+            alive &= value >= _clipped(self._low - rest_high)
+            safe &= value >= _clipped(self._low - rest_low)
         if self._high is not None:
-            alive &= value + self._rest_low[level + 1] <= self._high
-            safe &= value + self._rest_high[level + 1] <= self._high
+            alive &= value <= _clipped(self._high - rest_low)
+            safe &= value <= _clipped(self._high - rest_high)
         if safe.any():
             floor = int(value[safe].min())
             columns = np.where(safe, floor, value)[None, :]
         return columns, alive
+
+
+def _clipped(bound: int) -> int:
+    """Return a bound within int64; values stay below 2^62 (numbers in lists are limited so that their sums do)."""
+    return max(-(1 << 62), min(1 << 62, bound))
 
 
 class UnitAutomaton(ABC):

@@ -4,12 +4,14 @@ Planning is part of the draw: the same sheet must give the same plan on every ma
 *steps* (nominal nanoseconds from the table of constants below), no clock decides, pilots have fixed numbers of proposals,
 and their bits come from a key of their own.
 
-The search widens its budget step by step. Within a budget it tries to build in everything, then adds rules one at a time
-where that saves most; it stops when a wider search would cost more than it could save.
+The search widens its budget of edges step by step. Within a budget it tries to build in everything; if that does not fit,
+it builds in one rule after the other, as far as they fit and pay. It stops when everything is built in, or when the search has cost
+as much as drawing by the best plan found.
 """
 
 from __future__ import annotations
 
+import sys
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
@@ -27,18 +29,24 @@ from core.supersets.diagram import Diagram, OverBudget
 FORMAT = "lotwright plan 1"
 
 # Nominal nanoseconds, measured once (two cores, numpy 2.4) and shipped: part of what fixes the plan.
-STEPS_PER_EDGE = 100
+STEPS_PER_EDGE = 40
+STEPS_PER_EVENT = 60_000
 STEPS_PER_LEVEL = 150
 STEPS_PER_ELEMENT = 12
 STEPS_PER_CHECK = 4
-BYTES_PER_EDGE = 200
-BUDGETS = (100_000, 1_000_000, 8_000_000, 64_000_000)
-# So much is always spent on the attempt to build in every rule: the exact size is worth it.
-WORTH_THE_SIZE = 1_000_000
+BYTES_PER_EDGE = 60
+BUDGETS = (50_000, 500_000, 5_000_000, 50_000_000)
+# So much may be spent on planning, however cheap the draw.
+ALWAYS = 300_000_000
+# Plans are made for at least so many outcomes: size and chances are estimated from about as many.
+FEWEST = 1000
 PILOT = 1024
 LONGEST_PILOT = 32 * PILOT
 WANTED_IN_PILOT = 50
 MOST_EDGES_COUNTED = 6_000_000
+
+# Sizes are exact integers of any length, also in plans and records.
+sys.set_int_max_str_digits(0)
 
 Tick = Callable[[], None]
 
@@ -67,7 +75,7 @@ class Plan:
         Exact number of outcomes of the superset as decimal text, or None where the diagram is too large to count with
         integers; `about` is its size in words.
     pilot
-        Ledger of the pilot: proposals made with bits of their own and thrown away.
+        Ledger of the last pilot: proposals made with bits of their own and thrown away; their number is fixed beforehand.
     words
         Why, in sentences.
     """
@@ -174,101 +182,106 @@ class _Search:
     outcomes: int
     memory: float
     tick: Tick
-    spent: int = 0
+    spent: int = 0  # steps, over all attempts
     tried: dict[tuple[str, ...], int] = field(default_factory=dict)
     found: dict[tuple[str, ...], _Candidate] = field(default_factory=dict)
 
     def best(self) -> _Candidate:
         return min(self.found.values(), key=lambda c: (c.cost(self.outcomes), [r.id for r in c.rules]))
 
-    def attempt(self, rules: Sequence[Rule], budget: int) -> _Candidate | None:
-        """Return the candidate that builds in these rules, or None if it would need more edges than `budget`."""
+    def attempt(self, rules: Sequence[Rule], budget: int, arrangement: str = "") -> _Candidate | None:
+        """Return the candidate that builds in these rules, or None if it would need more edges than `budget`.
+
+        All orders of levels are tried, or only the one named.
+        """
         chosen = tuple(rule for rule in self.sheet.rules if rule in rules)
         ids = tuple(rule.id for rule in chosen)
         if ids in self.found:
             return self.found[ids]
-        if self.tried.get(ids, -1) >= budget:
+        if self.tried.get(ids, -1) >= budget or (self.found and self.spent > self.allowance()):
             return None
         self.tried[ids] = budget
-        smallest = self._smallest(chosen, budget)
+        names = [arrangement] if arrangement else arrangements(self.sheet.kind)
+        smallest = self._smallest(chosen, budget, names)
         if smallest is None:
             return None
-        diagram, arrangement = smallest
+        diagram, best_arrangement = smallest
         if diagram.is_empty:
-            raise _impossible(self.sheet, chosen, arrangement, budget, self.tick)
-        self.found[ids] = self._piloted(chosen, diagram, arrangement)
+            raise _impossible(self.sheet, chosen, best_arrangement, budget, self.tick)
+        self.found[ids] = self._piloted(chosen, diagram, best_arrangement)
         return self.found[ids]
 
-    def _smallest(self, chosen: tuple[Rule, ...], budget: int) -> tuple[Diagram, str] | None:
-        """Return the smallest diagram of these rules over the orders of levels worth trying."""
+    def _smallest(self, chosen: tuple[Rule, ...], budget: int, names: Sequence[str]) -> tuple[Diagram, str] | None:
+        """Return the smallest diagram of these rules over these orders of levels."""
         found: tuple[Diagram, str] | None = None
-        names = arrangements(self.sheet.kind)
         for arrangement in names:
-            if found is not None and found[0].steps < BUDGETS[0] // 5:
+            if found is not None and found[0].tried < BUDGETS[0]:
                 break
-            # the order of the list seldom beats the first choice: not worth a second attempt that fails
-            if arrangement == "list" and arrangement != names[0] and found is None and budget <= WORTH_THE_SIZE:
-                break
-            limit = budget if found is None else found[0].steps - 1
+            limit = budget if found is None else found[0].tried - 1
             try:
                 diagram = superset(self.sheet.kind, chosen, arrangement, budget=limit, tick=self.tick)
-            except OverBudget:
-                self.spent += limit * STEPS_PER_EDGE
+            except OverBudget as over:
+                self.spent += limit * STEPS_PER_EDGE + over.events * STEPS_PER_EVENT
                 continue
-            self.spent += diagram.steps * STEPS_PER_EDGE
+            self.spent += _building(diagram)
             found = diagram, arrangement
         return found
 
     def _piloted(self, chosen: tuple[Rule, ...], diagram: Diagram, arrangement: str) -> _Candidate:
         checks = [rule for rule in self.sheet.rules if rule not in chosen]
-        pilot = run_pilot(self.sheet, diagram, checks, PILOT)
+        pilot = run_pilot(self.sheet, diagram, checks, PILOT, "pilot")
         width = self.sheet.kind.width
         per_proposal = diagram.levels * STEPS_PER_LEVEL + width * STEPS_PER_ELEMENT
         per_proposal += sum(rule.effort() for rule in checks) * width * STEPS_PER_CHECK
         self.spent += PILOT * per_proposal
-        return _Candidate(chosen, diagram, arrangement, pilot, diagram.steps * STEPS_PER_EDGE, per_proposal)
+        return _Candidate(chosen, diagram, arrangement, pilot, _building(diagram), per_proposal)
 
     def run(self) -> _Candidate:
         """Search within wider and wider budgets; return the cheapest candidate."""
         largest = int(self.memory * 2**30) // BYTES_PER_EDGE
-        rules = self.sheet.rules
         self.attempt((), largest)
         if not self.found:
             raise Infeasible("Planning needs more memory than allowed even without building in a rule; raise --memory.")
-        for budget in BUDGETS:
-            budget = min(budget, largest)
-            if budget > WORTH_THE_SIZE and budget * STEPS_PER_EDGE > self.best().cost(self.outcomes):
+        for step in BUDGETS:
+            budget = min(step, largest)
+            if self.spent > self.allowance():
                 break
-            if self.attempt(rules, budget) is not None:
-                break
+            full = self.attempt(self.sheet.rules, budget)
+            if full is not None:
+                # the exact size is worth a cheap build, even where a draw alone would not need it
+                return full if full.cost(self.outcomes) <= ALWAYS else self.best()
             self._grow(budget)
-        full = self.found.get(tuple(rule.id for rule in rules))
-        if full is not None and full.diagram.steps <= WORTH_THE_SIZE:
-            return full
         return self.best()
 
+    def allowance(self) -> float:
+        """Return the steps that may be spent on planning: as much as the best plan so far takes to draw."""
+        return max(ALWAYS, self.best().cost(self.outcomes))
+
     def _grow(self, budget: int) -> None:
-        """Add rules one at a time to the best candidate, while that pays."""
+        """Build in one rule more at a time, the one that rejects most first, while the budget holds them."""
         current = self.best()
-        while True:
-            cost = current.cost(self.outcomes)
-            limit = min(budget, max(BUDGETS[0], int(cost) // STEPS_PER_EDGE))
-            better: _Candidate | None = None
-            for rule in self.sheet.rules:
-                if rule in current.rules or not current.pilot.rules[rule.id].any:
-                    continue
-                candidate = self.attempt((*current.rules, rule), limit)
-                if candidate is not None and candidate.cost(self.outcomes) < 0.95 * cost:
-                    cost, better = candidate.cost(self.outcomes) / 0.95, candidate
-            if better is None:
+        left = [rule for rule in self.sheet.rules if rule not in current.rules]
+        while left:
+            counts = current.pilot.rules
+            left.sort(key=lambda rule: (-counts[rule.id].any, rule.id))
+            rule = left.pop(0)
+            if not counts[rule.id].any:
                 return
-            current = better
+            # the first rule settles the order of levels
+            order = current.arrangement if current.rules else ""
+            candidate = self.attempt((*current.rules, rule), budget, order)
+            if candidate is not None and candidate.cost(self.outcomes) < current.cost(self.outcomes):
+                current = candidate
 
 
-def run_pilot(sheet: Sheet, diagram: Diagram, checks: Sequence[Rule], proposals: int) -> Ledger:
-    """Return the ledger of a pilot: its bits are not those of any draw."""
+def _building(diagram: Diagram) -> int:
+    return diagram.tried * STEPS_PER_EDGE + diagram.events * STEPS_PER_EVENT
+
+
+def run_pilot(sheet: Sheet, diagram: Diagram, checks: Sequence[Rule], proposals: int, label: str) -> Ledger:
+    """Return the ledger of a pilot: its bits, under a label of their own, are not those of any draw."""
     ids = [rule.id for rule in checks]
-    key = make_key("pilot", sheet.digest)
+    key = make_key(label, sheet.digest)
     ledger = Ledger.over(ids)
     size = pilot_block(sheet)
     for block in range((proposals + size - 1) // size):
@@ -299,15 +312,15 @@ def make_plan(sheet: Sheet, *, outcomes: int = 1, memory: float = 4.0, tick: Tic
     Infeasible
         if it is proved that no outcome meets the rules; carries a smallest conflicting set.
     """
-    search = _Search(sheet, outcomes, memory, tick)
+    search = _Search(sheet, max(outcomes, FEWEST), memory, tick)
     best = search.run()
     checks = [rule for rule in sheet.rules if rule not in best.rules]
-    pilot = best.pilot
+    # the search chose by its own pilots, so a fresh one says what to expect; its size is fixed before it is made
     proposals = PILOT
-    while checks and pilot.accepted < WANTED_IN_PILOT and proposals < LONGEST_PILOT:
-        proposals *= 4
-        pilot = run_pilot(sheet, best.diagram, checks, proposals)
-        tick()
+    while checks and proposals < LONGEST_PILOT and proposals * best.acceptance() < WANTED_IN_PILOT:
+        proposals *= 2
+    pilot = run_pilot(sheet, best.diagram, checks, proposals, "last pilot")
+    tick()
     checks.sort(key=lambda rule: (-Fraction(pilot.rules[rule.id].any, rule.effort()), rule.id))
     countable = best.diagram.edges <= MOST_EDGES_COUNTED
     plan = Plan(

@@ -49,13 +49,19 @@ class Process(ABC):
 
     levels: tuple[Level, ...]
     start: tuple[int, ...] = ()
+    units: int
+
+    @property
+    def count_type(self) -> type[np.int16] | type[np.int64]:
+        """Type of own columns: they hold numbers of units, and states are copied often."""
+        return np.int16 if self.units < 1 << 15 else np.int64
 
     @abstractmethod
     def step(self, level: int, event: Event, own: Columns) -> tuple[Columns, NDArray[np.int64], Mask | None]:
         """Return own columns after the event, the pool's size before it, and the states where it can happen."""
 
     @abstractmethod
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         """Return one uniform outcome for each path; `events` has shape (batch, levels)."""
 
     @abstractmethod
@@ -128,7 +134,8 @@ class Taking(Process):
     def __init__(self, levels: Sequence[Level], members: Sequence[NDArray[np.int64]], *, exhaust: bool) -> None:
         self.levels = tuple(levels)
         self.members = tuple(members)
-        self._sizes = np.array([len(m) for m in members], np.int64)
+        self.units = sum(len(m) for m in members)
+        self._sizes = np.array([len(m) for m in members], self.count_type)
         self._exhaust = exhaust
         first: dict[int, int] = {}
         last: dict[int, int] = {}
@@ -166,11 +173,11 @@ class Taking(Process):
                 alive &= after[self._rows[level][group]] == 0
         return after[self._kept[level]], pool, alive
 
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         """Left to the kind."""
         raise TypeError("a kind lifts its own outcomes")
 
-    def counts(self, events: NDArray[np.int16], level: int) -> NDArray[np.int64]:
+    def counts(self, events: NDArray[np.int32], level: int) -> NDArray[np.int64]:
         """Return how many units are picked at a level, shape (batch,)."""
         table = np.array([event.count for event in self.levels[level].events], np.int64)
         return table[events[:, level]]

@@ -78,16 +78,26 @@ def needed_bits(size: int) -> float:
 # -- sizes ----------------------------------------------------------------------------------------------------------
 
 
-def admissible(plan: Plan, weight: int, ledger: Ledger) -> dict[str, Any]:
-    """Return the number of admissible outcomes: exact, or an estimate with its 95 % interval; integers as text."""
+def admissible(plan: Plan, weight: int, drawn: Ledger | None = None) -> dict[str, Any]:
+    """Return the number of admissible outcomes: exact, or an estimate with its 95 % interval; integers as text.
+
+    Estimated from the plan's pilot, or from a draw that was asked for more outcomes than the pilot accepted. A draw stops
+    at its last outcome (inverse sampling): there (r - 1) / (N - 1) is unbiased, and the Clopper-Pearson interval still
+    covers (its lower end is exact, its upper end conservative).
+    """
     size = int(plan.size) if plan.size is not None else weight
     if plan.size is not None and not plan.checked:
         return {"exact": True, "size": plan.size}
+    ledger = pilot_ledger(plan)
+    accepted, proposed = ledger.accepted, ledger.proposed
+    if drawn is not None and drawn.accepted > max(1, accepted):
+        ledger = drawn
+        accepted, proposed = drawn.accepted - 1, drawn.proposed - 1
     low, high = ledger.interval()
     scale = 10**15
     return {
         "exact": False,
-        "estimate": str(size * ledger.accepted // max(1, ledger.proposed)),
+        "estimate": str(size * accepted // max(1, proposed)),
         "low": str(size * math.floor(low * scale) // scale),
         "high": str(-(-size * math.ceil(high * scale) // scale)),
     }
@@ -243,7 +253,7 @@ def record_of(
     """
     sheet, plan = ready.sheet, ready.plan
     size = admissible(plan, int(ready.diagram.weight), drawn.ledger)
-    needed = needed_bits(int(size.get("size") or size["estimate"]))
+    needed = needed_bits(int(size.get("size") or size["high"]))
     bits = seed_bits(parties)
     record: dict[str, Any] = {
         "format": FORMAT,

@@ -145,7 +145,7 @@ def _read_sheet(text: str, folder: Path, files: list[str]) -> _Case | Finding:
     """Read the sheet and its lists; a Finding if that fails. The names of the lists are added to `files`."""
     part = "sheet"
     try:
-        sheet = tomllib.loads(text, parse_float=Decimal)
+        sheet = tomllib.loads(text.removeprefix("\ufeff"), parse_float=Decimal)
         _need(sheet.get("format") == 1, "only sheets of format 1 can be re-checked independently")
         rules, outcome, frame = sheet.get("rule", []), sheet.get("outcome", {}), sheet.get("frame", {})
         kind = outcome.get("kind")
@@ -194,6 +194,8 @@ def _structure(case: _Case, rows: list[Row]) -> Outcome:
         bounds = _bounds({key: limits.get(key) or None for key in ("min", "max")})
         if case.kind == "order":
             bounds = Fraction(1), Fraction(1)
+        elif case.kind == "roster":  # columns of a slot are for rules to refer to
+            bounds = None, None
         elif case.kind == "selection":
             size = case.outcome.get("size", {})
             size = size if isinstance(size, dict) else {"min": size, "max": size}

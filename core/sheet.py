@@ -4,21 +4,19 @@ from __future__ import annotations
 
 import hashlib
 import json
-import tomllib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from decimal import Decimal
 from typing import Any
 
 from pydantic import Field
 
 from core import kinds
-from core.errors import Fault, SheetError
-from core.frame import Frame, Table, frame_of, nearest
+from core.errors import SheetError
+from core.frame import Frame, Table, clean, frame_of
 from core.kinds import OutcomeKind
-from core.reading import Fields, OpenTable, Report, TableFile
+from core.reading import Fields, OpenTable, Report, TableFile, read_toml, shown
 from core.rules import Rule
-from core.setting import RuleFields, Setting
+from core.setting import Setting, with_article
 from core.tables import inline_table
 
 FORMAT = 1
@@ -133,29 +131,26 @@ def read_sheet(text: str, name: str, open_table: OpenTable) -> Sheet:
         with all faults that could be found in one go.
     """
     report = Report(name, "")
-    try:
-        document = tomllib.loads(text, parse_float=Decimal)
-    except tomllib.TOMLDecodeError as error:
-        raise SheetError(Fault(f"this is not TOML: {error}.", name)) from None
-    except RecursionError:
-        raise SheetError(Fault("this is not TOML: it is nested too deeply.", name)) from None
-    fields = report.fields(SheetFields, document)
-    if document.get("format") != FORMAT and isinstance(document.get("format"), int):
+    document = read_toml(text, name)
+    if type(document.get("format")) is int and document["format"] != FORMAT:
+        # what another format means nobody knows here, so no more faults are looked for
         report.fault("format", "this format is not known.", found=document["format"], allowed=str(FORMAT))
-    if fields is None or report.faults:
         raise SheetError(report.faults)
+    fields = report.fields(SheetFields, document)
     tables: dict[str, Table] = {}
-
-    def open_once(wanted: TableFile) -> Table:
-        if wanted.file not in tables:
-            tables[wanted.file] = open_table(wanted)
-        return tables[wanted.file]
-
-    record = report.at("[record]").fields(RecordFields, fields.record)
-    frame = _frame(fields.frame, open_once, report.at("[frame]"))
-    found_kind = _kind(fields.outcome, frame, open_once, report.at("[outcome]"))
-    read = _rules(fields.rule, frame, found_kind, open_once, report)
-    if report.faults or record is None or frame is None or found_kind is None:
+    opened = _opened_once(open_table, tables)
+    # whatever is wrong at the top, the tables below are read all the same: all faults are told in one go
+    told = document.get("record")
+    record = report.at("[record]").fields(RecordFields, told if isinstance(told, dict) else {})
+    frame, found_kind = None, None
+    if isinstance(document.get("frame"), dict):
+        frame = _frame(document["frame"], opened, report.at("[frame]"))
+    if isinstance(document.get("outcome"), dict):
+        found_kind = _kind(document["outcome"], frame, opened, report.at("[outcome]"))
+    listed = document.get("rule", [])
+    listed = [table for table in listed if isinstance(table, dict)] if isinstance(listed, list) else []
+    read = _rules(listed, frame, found_kind, opened, report)
+    if report.faults or fields is None or record is None or frame is None or found_kind is None:
         raise SheetError(report.faults)
     return Sheet(
         name=name,
@@ -173,26 +168,48 @@ def read_sheet(text: str, name: str, open_table: OpenTable) -> Sheet:
     )
 
 
+def _opened_once(open_table: OpenTable, tables: dict[str, Table]) -> OpenTable:
+    """Return an opener that reads each list once and enters it in `tables` by its name.
+
+    A file that is read in two ways (two worksheets of a workbook, say) is entered once: its digest is over all of it.
+    """
+    known: dict[tuple[str | None, ...], Table] = {}
+
+    def open_once(wanted: TableFile) -> Table:
+        way = (wanted.file, wanted.encoding, wanted.separator, wanted.worksheet)
+        if way not in known:
+            known[way] = open_table(wanted)
+            tables.setdefault(wanted.file, known[way])
+        return known[way]
+
+    return open_once
+
+
 def _frame(table: Mapping[str, Any], open_table: OpenTable, report: Report) -> Frame | None:
     fields = report.fields(FrameFields, table)
     if fields is None:
         return None
     if (fields.file is None) == (fields.units is None):
-        report.fault("file", "either file or units must be given.", allowed='file = "list.csv"')
+        found = None if fields.file is None else "both"
+        report.fault("file", "either file or units must be given.", found=found, allowed='file = "list.csv"')
         return None
     try:
         if fields.units is not None:
-            return frame_of(inline_table("units", fields.units), fields.id)
-        wanted = TableFile(
-            file=fields.file or "",
-            id=fields.id,
-            encoding=fields.encoding,
-            separator=fields.separator,
-            worksheet=fields.worksheet,
-        )
-        return frame_of(open_table(wanted), fields.id)
+            rows = inline_table(f"{report.file}, {report.place}, units", fields.units)
+        else:
+            rows = open_table(TableFile(**fields.model_dump(exclude={"units"})))
+        if clean(fields.id) not in rows.columns:
+            report.fault(
+                "id",
+                "the list has no such column to take the ids from.",
+                found=fields.id,
+                allowed=", ".join(rows.columns),
+                known=rows.columns,
+            )
+            return None
+        return frame_of(rows, fields.id)
     except SheetError as error:
-        report.take(error)
+        report.take(error, "file")
         return None
 
 
@@ -200,7 +217,8 @@ def _kind(table: Mapping[str, Any], frame: Frame | None, open_table: OpenTable, 
     word = table.get("kind")
     known = sorted(OutcomeKind.known)
     if not isinstance(word, str) or word not in OutcomeKind.known:
-        report.fault("kind", "this is no kind of outcome.", found=word, allowed=", ".join(known), known=known)
+        message = "this is no kind of outcome." if "kind" in table else "this key is missing."
+        report.fault("kind", message, found=word, allowed=", ".join(known), known=known)
         return None
     kind = OutcomeKind.known[word]
     fields = report.fields(kind.Fields, table)
@@ -220,15 +238,16 @@ def _rules(
     ids: set[str] = set()
     for number, table in enumerate(listed, 1):
         word = table.get("kind")
-        at = report.at(f"[[rule]] {number} ({word})" if isinstance(word, str) else f"[[rule]] {number}")
+        at = report.at(f"[[rule]] {number} ({shown(word)})" if word and isinstance(word, str) else f"[[rule]] {number}")
         name = table.get("id", f"{word} {number}")
-        if isinstance(name, str) and name in ids:
-            at.fault("id", "another rule has this id.", found=name)
+        if isinstance(name, str):
+            if name in ids:
+                at.fault("id", "another rule has this id.", found=name, allowed="an id that no other rule has")
+            ids.add(name)
         rule = _rule(table, word, frame, kind, open_table, at)
         if rule is not None:
             rule.id = name
             rule.note = table.get("note", "")
-            ids.add(name)
             found.append(OffRule(rule.id, rule.name, rule.note, rule.words()) if table.get("off") else rule)
     return found
 
@@ -243,19 +262,27 @@ def _rule(
 ) -> Rule | None:
     known = sorted(Rule.known)
     if not isinstance(word, str) or word not in Rule.known:
-        report.fault("kind", "there is no such rule.", found=word, allowed=", ".join(known), known=known)
+        message = "there is no such rule." if "kind" in table else "this key is missing."
+        report.fault("kind", message, found=table.get("kind"), allowed=", ".join(known), known=known)
         return None
     rule = Rule.known[word]
-    fields = report.fields(rule.Fields, table)
     if kind is not None and kind.name not in rule.kinds:
-        report.fault("kind", f"{word} does not apply to a {kind.name}.", allowed=", ".join(rule.kinds))
+        message = f"this rule is for {_either(rule.kinds)}, not for {with_article(kind.name)}."
+        allowed = ", ".join(name for name in known if kind.name in Rule.known[name].kinds)
+        report.fault("kind", message, found=word, allowed=allowed)
+        return None
+    fields = report.fields(rule.Fields, table)
+    if fields is not None and fields.id is not None and not fields.id.strip():
+        report.fault("id", "an id cannot be blank.")
         return None
     if fields is None or frame is None or kind is None:
         return None
-    if isinstance(fields, RuleFields) and fields.id is not None and not fields.id.strip():
-        report.fault("id", "an id cannot be blank.")
-        return None
     return rule.of(fields, Setting(frame, kind, open_table), report)
+
+
+def _either(names: Sequence[str]) -> str:
+    told = [with_article(name) for name in names]
+    return f"{', '.join(told[:-1])} or {told[-1]}" if len(told) > 1 else told[0]
 
 
 def _canonical(value: Any) -> Any:
@@ -267,9 +294,3 @@ def _canonical(value: Any) -> Any:
     if isinstance(value, bool | int | str):
         return value
     return str(value)
-
-
-def did_you_mean(word: str, known: list[str]) -> str:
-    """Return the nearest known name as a question, or ""."""
-    near = nearest(word, known)
-    return f" Did you mean {near!r}?" if near else ""

@@ -27,14 +27,18 @@ def make_key(label: str, digest: str, parties: Iterable[tuple[str, str]] = ()) -
     taken in the order of their names. `label` keeps streams apart ("draw", "pilot", ...).
     """
     texts = [FORMAT, label, digest]
-    for name, text in sorted(parties):
-        texts += [name, text]
+    for party in sorted((_normal(name), _normal(text)) for name, text in parties):
+        texts += party
     joined = hashlib.sha256()
     for text in texts:
-        data = unicodedata.normalize("NFC", text).encode()
+        data = _normal(text).encode()
         joined.update(len(data).to_bytes(8, "big"))
         joined.update(data)
     return joined.digest()
+
+
+def _normal(text: str) -> str:
+    return unicodedata.normalize("NFC", text)
 
 
 class Bits:

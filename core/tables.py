@@ -31,8 +31,6 @@ from core.cells import (
     cleaned,
     without_blank_rows,
 )
-from core.errors import Fault, SheetError
-from core.frame import Table, clean, listed, nearest, shortened
 from core.csvtext import (
     SEPARATORS,
     Layout,
@@ -44,6 +42,8 @@ from core.csvtext import (
     check_widths,
     layout_of,
 )
+from core.errors import Fault, SheetError
+from core.frame import Table, clean, listed, nearest, shortened
 from core.worksheet import read_worksheet
 
 ENCODINGS = (

@@ -18,10 +18,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from core.errors import SheetError
-from core.frame import Frame, Table
+from core.frame import Frame, Table, clean, listed
 from core.parts import Mask, Part, UnitAutomaton
 from core.process import Process, Rows
 from core.reading import Fields, OpenTable, Report, TableFile, plain
+from core.statement import Statement
 from core.tables import inline_table
 
 
@@ -151,6 +152,19 @@ class OutcomeKind(ABC):
     def read(self, lines: Sequence[tuple[int, str]], ids: Sequence[str]) -> Rows | str:
         """Return the row that lines (unit's index, second column) make, or a sentence why they are no outcome."""
 
+    def variables(self) -> NDArray[np.int64]:
+        """Return which 0/1 variable says that a cell is used: from 1 on, 0 for cells that cannot be. Shape `cells`."""
+        possible = self.possible()
+        return np.where(possible, np.cumsum(possible).reshape(possible.shape), 0)
+
+    @abstractmethod
+    def state(self, model: Statement) -> None:
+        """Say when cells make an outcome; that impossible cells are not used goes without saying."""
+
+    @abstractmethod
+    def row(self, used: Mask) -> Rows:
+        """Return the outcome in which these cells (bool, shape `cells`) are used, as one row."""
+
     @property
     def header(self) -> tuple[str, ...]:
         """Column names of `lines`."""
@@ -196,14 +210,19 @@ def read_places(value: PlaceList, word: str, key: str, open_table: OpenTable, re
         try:
             table = open_table(value)
         except SheetError as error:
-            report.take(error)
+            report.take(error, key, inside=key)
             return None
-        column = value.id or "id"
+        column = clean(value.id or "id")
         if column not in table.columns:
-            report.fault(key, f"{table.name} has no such column.", found=column, allowed=", ".join(table.columns))
+            message = f"{table.name} has no such column to take the names of the {word}s from."
+            known = table.columns
+            report.fault(f"{key}.id", message, found=column, allowed=listed(known), known=known)
             return None
         names = table.text(column)
     else:
+        if not value:
+            report.fault(key, f"there is no {word}.", allowed="at least one")
+            return None
         items = [item if isinstance(item, dict) else {"id": item} for item in value]
         missing = [number for number, item in enumerate(items, 1) if plain(item.get("id")) is None]
         if missing:
@@ -211,19 +230,20 @@ def read_places(value: PlaceList, word: str, key: str, open_table: OpenTable, re
             return None
         columns = dict.fromkeys(column for item in items for column in item)
         try:
-            table = inline_table(key, [{c: item.get(c, "") for c in columns} for item in items])
+            table = inline_table(
+                f"{report.file}, {report.place}, {key}", [{c: item.get(c, "") for c in columns} for item in items]
+            )
         except SheetError as error:
             report.take(error)
             return None
         names = table.text("id")
-    if not names:
-        report.fault(key, f"there is no {word}.", allowed="at least one")
-        return None
+    seen: dict[str, int] = {}
     for number, name in enumerate(names, 1):
-        if not name or names.index(name) != number - 1:
-            cause = "has no name" if not name else "has the name of an earlier one"
-            report.fault(key, f"{word} {number} {cause}.", found=name)
+        if not name or name in seen:
+            cause = f"has the name of {word} {seen[name]}" if name else "has no name"
+            report.fault(key, f"{word} {number} {cause}.", found=name or None, allowed="names that are all different")
             return None
+        seen[name] = number
     return Places(word, tuple(names), table)
 
 

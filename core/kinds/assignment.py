@@ -9,11 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 from pydantic import Field
 
-from core.frame import Frame
+from core.frame import Frame, nearest
 from core.kinds import Arrangement, Cells, Members, OutcomeKind, PlaceList, Places, read_places
-from core.parts import Count, Event, Level, Part, UnitAutomaton
+from core.parts import Count, Event, Level, Mask, Part, UnitAutomaton
 from core.process import Process, Rows, Taking, TakingTrace, Trace
 from core.reading import Fields, OpenTable, Report
+from core.statement import Statement
 from core.stream import Bits
 
 
@@ -53,14 +54,21 @@ class Assignment(OutcomeKind):
             return None
         for name, low, high in zip(places.ids, least, most, strict=True):
             if low > high:
+                if high == frame.size:
+                    message = f"place {name} needs more units than the list has."
+                    report.fault("places", message, found=low, allowed=f"at most {frame.size}")
+                    return None
                 report.fault("places", f"place {name}: min is above max.", found=f"min {low}, max {high}")
                 return None
         if sum(least) > frame.size:
-            report.fault("places", f"the places need at least {sum(least)} units; the list has {frame.size}.")
+            message = f"the places need more units than the list has ({frame.size})."
+            report.fault("places", message, found=f"{sum(least)} as the sum of min")
             return None
         if sum(most) < frame.size:
-            report.fault("places", f"the places take at most {sum(most)} units; the list has {frame.size}.")
+            message = f"the places do not hold all {frame.size} units of the list."
+            report.fault("places", message, found=f"{sum(most)} as the sum of max")
             return None
+        _hint(places, report)
         return cls(frame.size, places, least, [min(high, frame.size) for high in most])
 
     @property
@@ -145,6 +153,27 @@ class Assignment(OutcomeKind):
                 return f"{self.places.ids[place]} has {count} units, not between {low} and {high}."
         return row
 
+    def state(self, model: Statement) -> None:
+        """Say that every unit has one place, and how many a place takes."""
+        places = range(len(self.places.ids))
+        for unit in range(self.units):
+            model.exactly_one(model.at(unit, place) for place in places)
+        for place, (low, high) in enumerate(zip(self.least, self.most, strict=True)):
+            if low > 0 or high < self.units:
+                model.sum(((1, model.at(unit, place)) for unit in range(self.units)), low, high)
+
+    def row(self, used: Mask) -> Rows:
+        """Return each unit's place."""
+        return used.argmax(axis=1).astype(np.int32)
+
+
+def _hint(places: Places, report: Report) -> None:
+    """Say so if a column seems to be a misspelt min or max, which would otherwise limit nothing."""
+    for column in places.columns:
+        near = nearest(column, ("min", "max"))
+        if near and column not in ("min", "max"):
+            report.notice(f"the places have a column {column}, which limits nothing; was {near} meant?")
+
 
 def _capacity(places: Places, column: str, default: int, report: Report) -> list[int] | None:
     """Return the least or greatest number of units of each place; blank means no limit."""
@@ -152,13 +181,9 @@ def _capacity(places: Places, column: str, default: int, report: Report) -> list
         return [default] * len(places.ids)
     numbers = []
     for row, text in enumerate(places.table.text(column)):
-        if text and not text.isdecimal():
-            report.fault(
-                "places",
-                f"{places.table.name}, {places.table.place(row, column)}: this is no number of units.",
-                found=text,
-                allowed="an integer of at least 0, or blank",
-            )
+        if text and not (text.isascii() and text.isdecimal()):
+            at = report.line(places.table, row, column)
+            at.fault("", "this is no number of units.", found=text, allowed="an integer of at least 0, or a blank")
             return None
         numbers.append(int(text) if text else default)
     return numbers
@@ -173,7 +198,7 @@ class _Placing(Taking):
             if level.events:
                 self._levels_of.setdefault(level.events[0].group, []).append(index)
 
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         batch = len(events)
         rows = np.zeros((batch, self.kind.units), np.int32)
         for group, levels in self._levels_of.items():

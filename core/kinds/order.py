@@ -11,9 +11,10 @@ from pydantic import Field
 
 from core.frame import Frame
 from core.kinds import Arrangement, Cells, Members, OutcomeKind, Places
-from core.parts import Event, Level, UnitAutomaton
+from core.parts import Event, Level, Mask, UnitAutomaton
 from core.process import Process, Rows, Taking, TakingTrace, Trace
 from core.reading import Fields, OpenTable, Report
+from core.statement import Statement
 from core.stream import Bits
 
 
@@ -91,13 +92,24 @@ class Order(OutcomeKind):
             return "a unit stands there twice."
         return row
 
+    def state(self, model: Statement) -> None:
+        """Say that every unit has one position and every position one unit."""
+        every = range(self.units)
+        for one in every:
+            model.exactly_one(model.at(one, position) for position in every)
+            model.exactly_one(model.at(unit, one) for unit in every)
+
+    def row(self, used: Mask) -> Rows:
+        """Return the unit at each position."""
+        return used.argmax(axis=0).astype(np.int32)
+
 
 class _Lining(Taking):
     def __init__(self, kind: Order, levels: Sequence[Level], members: Members) -> None:
         super().__init__(levels, members, exhaust=True)
         self.kind = kind
 
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         batch = len(events)
         queue = np.empty((batch, self.kind.units), np.int32)
         offset = np.zeros(len(self.members), np.int64)

@@ -9,12 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 from pydantic import Field
 
-from core.errors import SheetError
-from core.frame import Frame
+from core.frame import Frame, listed
 from core.kinds import Arrangement, Cells, Members, OutcomeKind, Places, row_labels
 from core.parts import Columns, Event, Level, Mask, UnitAutomaton
 from core.process import Process, Rows, Trace
 from core.reading import Fields, OpenTable, Report
+from core.statement import Statement
 from core.stream import Bits
 
 
@@ -50,26 +50,25 @@ class Pairing(OutcomeKind):
         side: NDArray[np.int64] | None = None
         spare = frame.size % 2
         if fields.sides is not None:
-            try:
-                codes, values = frame.codes(fields.sides)
-            except SheetError as error:
-                report.take(error)
+            if fields.sides not in frame.columns:
+                known = frame.columns
+                message = "the list has no such column."
+                report.fault("sides", message, found=fields.sides, allowed=listed(known), known=known)
                 return None
+            codes, values = frame.codes(fields.sides)
             if len(values) != 2 or "" in values:
-                report.fault("sides", "this column must have two values.", found=f"{len(values)} values")
+                found = listed([value or "a blank" for value in values], 5)
+                report.fault("sides", "this column must have exactly two values.", found=found)
                 return None
             side = codes.astype(np.int64)
             spare = abs(frame.size - 2 * int(side.sum()))
         if spare > 1:
-            report.fault("sides", f"one side has {spare} units more than the other.", allowed="at most 1")
+            message = f"one side has {spare} units more than the other, so they cannot be paired."
+            report.fault("sides", message, allowed="sides of equal size, or one more with single = true")
             return None
         if spare and not fields.single:
-            report.fault(
-                "single",
-                "one unit is left over.",
-                found="single = false",
-                allowed="single = true, or even numbers",
-            )
+            allowed = "single = true, or an even number of units" if side is None else "single = true, or equal sides"
+            report.fault("single", "one unit is left over and finds no partner.", allowed=allowed)
             return None
         return cls(frame.size, side, single=bool(spare))
 
@@ -176,6 +175,26 @@ class Pairing(OutcomeKind):
                 return f"{ids[unit]} has no partner of the other side."
         return row
 
+    def variables(self) -> NDArray[np.int64]:
+        """Return the variables: one for each two units, and one for each that may stay single."""
+        possible = self.possible()
+        first = np.triu(possible)  # the column for being single lies above the diagonal
+        numbers = np.where(first, np.cumsum(first).reshape(first.shape), 0)
+        numbers[:, :-1] += numbers[:, :-1].T.copy()
+        return numbers
+
+    def state(self, model: Statement) -> None:
+        """Say that every unit has one partner or is single, and how many are single."""
+        every = range(self.units)
+        for unit in every:
+            model.exactly_one(model.at(unit, partner) for partner in range(self.units + 1))
+        model.sum(((1, model.at(unit, self.units)) for unit in every), int(self.single), int(self.single))
+
+    def row(self, used: Mask) -> Rows:
+        """Return each unit's partner, itself for a single one."""
+        partner = used.argmax(axis=1)
+        return np.where(partner == self.units, np.arange(self.units), partner).astype(np.int32)
+
 
 class _Joining(Process):
     """The next unit of a group (its earliest that is left) picks a partner, or nothing if none is left.
@@ -184,13 +203,13 @@ class _Joining(Process):
     """
 
     def __init__(self, kind: Pairing, levels: Sequence[Level], members: Members) -> None:
-        self.kind, self.levels, self.members = kind, tuple(levels), tuple(members)
+        self.kind, self.levels, self.members, self.units = kind, tuple(levels), tuple(members), kind.units
         self.start = (*(len(m) for m in members), 0)
 
     def step(self, level: int, event: Event, own: Columns) -> tuple[Columns, NDArray[np.int64], Mask | None]:
         """Take the picking unit out of its group, then the partner out of its own."""
         after = own.copy()
-        pool = np.zeros(own.shape[1], np.int64)
+        pool = np.zeros(own.shape[1], own.dtype)
         if event.count == 0:
             alive: Mask = own[event.group] == 0
         else:
@@ -208,7 +227,7 @@ class _Joining(Process):
             alive &= (after[:-1] == 0).all(axis=0) & (after[-1] == int(self.kind.single))
         return after, pool, alive
 
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         """Return pairs; the partner is uniform among those left of its group."""
         batch = len(events)
         every = np.arange(batch)

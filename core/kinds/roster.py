@@ -15,6 +15,7 @@ from core.kinds import Arrangement, Cells, Members, OutcomeKind, PlaceList, Plac
 from core.parts import Columns, Event, Level, Mask, UnitAutomaton
 from core.process import Process, Rows, Trace
 from core.reading import Fields, OpenTable, Report
+from core.statement import Statement
 from core.stream import Bits
 
 
@@ -88,6 +89,13 @@ class Roster(OutcomeKind):
                 return f"{ids[unit]} stands twice in {name}."
             row[unit, slot] = True
         return row
+
+    def state(self, model: Statement) -> None:
+        """Say nothing: every table is a roster."""
+
+    def row(self, used: Mask) -> Rows:
+        """Return the table itself."""
+        return used.copy()
 
 
 @dataclass(frozen=True)
@@ -179,7 +187,7 @@ class _Serving(Process):
     """
 
     def __init__(self, kind: Roster, states: _States) -> None:
-        self.kind, self.states = kind, states
+        self.kind, self.states, self.units = kind, states, kind.units
         levels: list[Level] = []
         self._slot_of: list[int] = []
         self._turns: list[list[int]] = []
@@ -208,7 +216,7 @@ class _Serving(Process):
         if level == self._first[slot]:
             own = self._open(slot, own)
         if not turns:
-            return own, np.zeros(own.shape[1], np.int64), None
+            return own, np.zeros(own.shape[1], own.dtype), None
         state = at[turns[level - self._first[slot]]]
         pool, rest = own[0], own[1:].copy()
         waiting = len(turns) - (level - self._first[slot]) - 1
@@ -224,13 +232,13 @@ class _Serving(Process):
         """Put the units that cannot be on duty into their next states at once."""
         at, turns = self.states.of_slot[slot], self._turns[slot]
         following = len(self.states.of_slot[slot + 1]) if slot + 1 < self.states.slots else 1
-        next_counts = np.zeros((following, own.shape[1]), np.int64)
+        next_counts = np.zeros((following, own.shape[1]), own.dtype)
         for number, state in enumerate(at):
             if state.on < 0:
                 next_counts[state.off] += own[number]
         return np.concatenate([own[turns], next_counts])
 
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         """Return rosters; who of a state is on duty is uniform."""
         batch = len(events)
         rows = np.zeros((batch, self.kind.units, self.states.slots), bool)

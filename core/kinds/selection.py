@@ -11,9 +11,10 @@ from pydantic import Field
 
 from core.frame import Frame
 from core.kinds import Arrangement, Cells, Members, OutcomeKind, Places
-from core.parts import Count, Event, Level, Part, UnitAutomaton
+from core.parts import Count, Event, Level, Mask, Part, UnitAutomaton
 from core.process import Process, Rows, Taking, TakingTrace, Trace
 from core.reading import Fields, OpenTable, Report
+from core.statement import Statement
 from core.stream import Bits
 
 
@@ -58,19 +59,15 @@ class Selection(OutcomeKind):
         else:
             least = size.min if size else 0
             most = frame.size if size is None or size.max is None else size.max
-        if isinstance(size, bool) or least < 0:
-            report.fault("size", "a size cannot be negative.", found=least, allowed="an integer of at least 0")
-            return None
-        if least > most:
-            report.fault("size", "the least size is above the greatest.", found=f"min {least}, max {most}")
+        if least < 0:
+            report.fault("size", "a size is never negative.", found=least, allowed="an integer of at least 0")
             return None
         if least > frame.size:
-            report.fault(
-                "size",
-                f"the list has only {frame.size:,} units.",
-                found=least,
-                allowed=f"at most {frame.size}",
-            )
+            message = "so many units cannot be drawn from this list."
+            report.fault("size", message, found=least, allowed=f"at most {frame.size}")
+            return None
+        if least > most:
+            report.fault("size", "min is above max.", found=f"min {least}, max {most}")
             return None
         return cls(frame.size, least, min(most, frame.size))
 
@@ -125,13 +122,22 @@ class Selection(OutcomeKind):
             return f"it has {len(drawn)} units; the sheet says: {self.words()}"
         return np.array(drawn + [self.units] * (self.width - len(drawn)), np.int32)
 
+    def state(self, model: Statement) -> None:
+        """Say how many are drawn."""
+        model.sum(((1, model.at(unit, 0)) for unit in range(self.units)), self.least, self.most)
+
+    def row(self, used: Mask) -> Rows:
+        """Return the drawn units."""
+        drawn = np.flatnonzero(used[:, 0]).tolist()
+        return np.array(drawn + [self.units] * (self.width - len(drawn)), np.int32)
+
 
 class _Drawing(Taking):
     def __init__(self, kind: Selection, levels: Sequence[Level], members: Members) -> None:
         super().__init__(levels, members, exhaust=False)
         self.kind = kind
 
-    def lift(self, events: NDArray[np.int16], bits: Bits) -> Rows:
+    def lift(self, events: NDArray[np.int32], bits: Bits) -> Rows:
         batch = len(events)
         rows = np.full((batch, self.kind.width + 1), self.kind.units, np.int32)
         filled = np.zeros(batch, np.int64)

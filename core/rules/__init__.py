@@ -20,6 +20,7 @@ from core.parts import Mask, Part, UnitAutomaton
 from core.process import Rows
 from core.reading import Report
 from core.setting import RuleFields, Setting
+from core.statement import Statement
 
 SELECTION, ASSIGNMENT, ROSTER, ORDER, PAIRING = "selection", "assignment", "roster", "order", "pairing"
 
@@ -71,6 +72,10 @@ class Rule(ABC):
         """Return which outcomes meet the rule: bool, shape (batch,). Row i of the answer depends on row i only."""
 
     @abstractmethod
+    def state(self, model: Statement) -> None:
+        """Say when the rule holds, about the cells of one outcome: exactly those outcomes that `check` passes."""
+
+    @abstractmethod
     def words(self) -> str:
         """Return the rule as complete sentences."""
 
@@ -104,3 +109,10 @@ class Rule(ABC):
 def heads(members: Members) -> NDArray[np.int64]:
     """Return the first unit of each group, which stands for all of it."""
     return np.array([int(m[0]) for m in members], np.int64)
+
+
+def unit_groups(units: int, codes: NDArray[np.int64] | None) -> list[list[int]]:
+    """Return the units of each value (negative: no value), or without values each unit on its own."""
+    if codes is None:
+        return [[unit] for unit in range(units)]
+    return [np.flatnonzero(codes == value).tolist() for value in range(int(codes.max(initial=-1)) + 1)]

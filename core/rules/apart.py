@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Sequence
 from typing import Any
 
@@ -14,7 +15,8 @@ from core.parts import Columns, Count, Event, Mask, Part
 from core.process import Rows
 from core.reading import Report
 from core.rules import ASSIGNMENT, ORDER, PAIRING, ROSTER, SELECTION, Case, Rule, heads
-from core.setting import GroupFields, Setting, Units
+from core.setting import GroupFields, Setting, Units, group_key
+from core.statement import Statement
 
 _WORDS = {
     SELECTION: "At most one of {group} is drawn.",
@@ -58,11 +60,10 @@ class Apart(Rule):
         places = len(setting.kind.places.ids)
         largest = max((len(g) for g in groups), default=0)
         if setting.kind.name == ASSIGNMENT and largest > places:
-            report.fault(
-                "",
-                f"{largest} units cannot all be in different places.",
-                allowed=f"at most {places} in a group",
-            )
+            group = next(g for g in groups if len(g) == largest)
+            message = f"this can never hold: {largest} units cannot all be in different places."
+            found = setting.unit_words(group.tolist())
+            report.fault(group_key(fields), message, found=found, allowed=f"groups of at most {places}")
             return None
         return cls(setting, groups, fields.alike)
 
@@ -112,6 +113,20 @@ class Apart(Rule):
     def effort(self) -> int:
         """One pass per group."""
         return max(1, len(self._groups))
+
+    def state(self, model: Statement) -> None:
+        """Say of each group that at most one is anywhere."""
+        places = range(len(self._kind.places.ids))
+        for group in (units.tolist() for units in self._groups):
+            if self._kind.name == PAIRING:
+                for unit, partner in itertools.combinations(group, 2):
+                    model.must(~model.at(unit, partner))
+            elif self._kind.name == ORDER:
+                for place in places[:-1]:
+                    model.at_most_one(model.at(unit, p) for unit in group for p in (place, place + 1))
+            else:
+                for place in places:
+                    model.at_most_one(model.at(unit, place) for unit in group)
 
     def words(self) -> str:
         """Return for example "No two of p1 and p2 are in the same place."."""

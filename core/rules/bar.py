@@ -12,7 +12,8 @@ from core.parts import Mask
 from core.process import Rows
 from core.reading import Report
 from core.rules import ASSIGNMENT, ORDER, PAIRING, ROSTER, SELECTION, Case, Rule
-from core.setting import Setting
+from core.setting import Setting, with_article
+from core.statement import Statement
 
 
 class Bar(Rule):
@@ -40,13 +41,14 @@ class Bar(Rule):
         named = f"{setting.unit_words(units)} {'are' if len(units) > 1 else 'is'}"
         if kind.name in (SELECTION, PAIRING):
             if fields.in_ is not None:
-                report.fault("in", f"a {kind.name} has no places.", found=fields.in_)
+                report.fault("in", f"{with_article(kind.name)} has no places.", found=fields.in_)
                 return None
             if kind.name == SELECTION:
                 return cls(setting, [], [(unit, 0) for unit in units], f"{named} certainly not drawn.")
             return cls(setting, units, [], f"{named} certainly single.")
         if kind.name != ROSTER and fields.in_ is None:
-            report.fault("in", "this key is missing.", allowed=f"a list of {kind.places.word}s")
+            message = f"this key is missing, units need it in {with_article(kind.name)}."
+            report.fault("in", message, allowed=f"a list of {kind.places.word}s")
             return None
         places = setting.in_places(fields.in_, "in", report)
         if places is None:
@@ -85,6 +87,13 @@ class Bar(Rule):
             else:
                 good &= ~holds(self._setting.kind, rows, cell)
         return good
+
+    def state(self, model: Statement) -> None:
+        """Say that the cells are not used."""
+        for unit in self._units:
+            model.must(model.at(unit, self._setting.kind.units))
+        for cell in self._cells:
+            model.must(~model.at(*cell))
 
     def words(self) -> str:
         """Return for example "p1 is certainly not drawn."."""

@@ -15,7 +15,8 @@ from core.parts import Columns, Event, Mask, Part
 from core.process import Rows
 from core.reading import Report, TableFile
 from core.rules import ORDER, Case, Rule, heads
-from core.setting import RuleFields, Setting
+from core.setting import RuleFields, Setting, one_of
+from core.statement import Statement
 
 
 class BeforeFields(RuleFields):
@@ -41,7 +42,8 @@ class Before(Rule):
     def of(cls, fields: Any, setting: Setting, report: Report) -> Before | None:
         """Read the pairs; a circle among them is a fault."""
         if (fields.pairs is None) == (fields.file is None):
-            report.fault("pairs", "either pairs or file must be given.", allowed='pairs = [["first", "later"]]')
+            both = [] if fields.pairs is None else ["pairs", "file"]
+            one_of(("pairs", "file"), both, report)
             return None
         pairs = setting.pairs(fields.pairs, fields.file, report)
         if pairs is None:
@@ -53,7 +55,8 @@ class Before(Rule):
             TopologicalSorter(earlier).prepare()
         except CycleError as error:
             circle = " before ".join(setting.frame.ids[unit] for unit in error.args[1])
-            report.fault("pairs", "these pairs go round in a circle, so they can never hold.", found=circle)
+            key = "pairs" if fields.file is None else "file"
+            report.fault(key, "this can never hold: these pairs go round in a circle.", found=circle)
             return None
         return cls(setting, np.array(pairs, np.int64))
 
@@ -72,6 +75,16 @@ class Before(Rule):
     def effort(self) -> int:
         """Positions have to be sorted."""
         return 8
+
+    def state(self, model: Statement) -> None:
+        """Compare positions."""
+        for first, second in self._pairs.tolist():
+            terms = [
+                (sign * place, model.at(unit, place))
+                for sign, unit in ((1, first), (-1, second))
+                for place in range(self._setting.kind.units)
+            ]
+            model.sum(terms, high=-1)
 
     def words(self) -> str:
         """Return for example "t02 stands before t09."."""

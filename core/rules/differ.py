@@ -7,12 +7,13 @@ from typing import Any
 
 import numpy as np
 
-from core.pairrules import PairFields, alike_table, pair_words, partners_allowed
+from core.pairrules import PairFields, alike_table, pair_words, partners_allowed, state_partners
 from core.parts import Mask
 from core.process import Rows
 from core.reading import Report
 from core.rules import PAIRING, Case, Rule
 from core.setting import Setting
+from core.statement import Statement
 
 
 class Differ(Rule):
@@ -50,6 +51,10 @@ class Differ(Rule):
     def check(self, rows: Rows) -> Mask:
         """Look up every pair."""
         return partners_allowed(self._allowed, rows)
+
+    def state(self, model: Statement) -> None:
+        """Say that no other pairs are made."""
+        state_partners(self._allowed, model)
 
     def words(self) -> str:
         """Return for example "The two of each pair have different institute."."""

@@ -13,8 +13,9 @@ from core.kinds import Members
 from core.parts import Columns, Event, Level, Mask, Part
 from core.process import Rows
 from core.reading import Report
-from core.rules import ASSIGNMENT, SELECTION, Case, Rule, heads
+from core.rules import ASSIGNMENT, SELECTION, Case, Rule, heads, unit_groups
 from core.setting import RuleFields, Setting
+from core.statement import Statement
 
 
 class DistinctFields(RuleFields):
@@ -46,7 +47,7 @@ class Distinct(Rule):
         if fields.min > len(values):
             report.fault(
                 "min",
-                "this can never hold: the column has too few values.",
+                f"this can never hold, {fields.column} has not so many different values.",
                 found=fields.min,
                 allowed=f"at most {len(values)}",
             )
@@ -84,6 +85,17 @@ class Distinct(Rule):
     def effort(self) -> int:
         """One pass per value."""
         return max(1, int(self._codes.max(initial=0)))
+
+    def state(self, model: Statement) -> None:
+        """Count the values in each place: a value counts only if a unit that has it is there."""
+        holders = unit_groups(self._kind.units, self._codes)
+        places = self._kind.places
+        for place, name in enumerate(places.ids):
+            seen = [model.new() for _ in holders]
+            for value, units in zip(seen, holders, strict=True):
+                model.any_of([~value, *(model.at(unit, place) for unit in units)])
+            what = f"different values of {self._fields.column}" + (f" in {places.word} {name}" if places.word else "")
+            model.sum(((1, value) for value in seen), self._fields.min, what=what)
 
     def words(self) -> str:
         """Return for example "At least 4 different values of department are drawn."."""

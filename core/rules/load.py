@@ -13,7 +13,8 @@ from core.parts import Mask, UnitAutomaton
 from core.process import Rows
 from core.reading import FromColumn, Report
 from core.rules import ROSTER, Case, Rule
-from core.setting import RuleFields, Setting, Where, bounds_words, where_words
+from core.setting import RuleFields, Setting, Where, bounds_words, stopped, where_words
+from core.statement import Statement
 
 
 class LoadFields(RuleFields):
@@ -44,21 +45,21 @@ class Load(Rule):
             report.fault("min", "a load needs min or max.", allowed="an integer of at least 0")
             return None
         slots = len(setting.kind.places.ids)
-        low = _per_unit(fields.min, "min", 0, setting, report)
-        high = _per_unit(fields.max, "max", slots, setting, report)
+        low = _per_unit(fields.min, "min", mask, setting, report)
+        high = _per_unit(fields.max, "max", mask, setting, report)
         if mask is None or low is None or high is None:
             return None
-        low, high = np.where(mask, low, 0), np.where(mask, high, slots)
-        for wrong, key, message in (
-            (low > high, "min", "min is above max"),
-            (low > slots, "min", f"there are only {slots} slots"),
-            ((low < 0) | (high < 0), "min", "a number of slots cannot be negative"),
-        ):
-            if wrong.any():
-                unit = int(np.flatnonzero(wrong)[0])
-                found = f"min {low[unit]}, max {high[unit]}"
-                report.fault(key, f"{setting.frame.ids[unit]}: {message}.", found=found)
-                return None
+        low = low if fields.min is not None else np.zeros_like(low)
+        high = np.where(mask, high, slots) if fields.max is not None else np.full_like(high, slots)
+        never, crossed = low > slots, low > high
+        if never.any() or crossed.any():
+            unit = int(np.flatnonzero(never | crossed)[0])
+            name = f"{setting.frame.ids[unit]}: " if FromColumn in (type(fields.min), type(fields.max)) else ""
+            message = "this can never hold, there are not so many slots." if never[unit] else "min is above max."
+            least = low[unit] if isinstance(fields.min, FromColumn) else fields.min
+            found = f"min {least}" + (f", max {high[unit]}" if fields.max is not None else "")
+            report.fault("min", f"{name}{message}", found=found, allowed=f"at most {slots}" if never[unit] else "")
+            return None
         if (low <= 0).all() and (high >= slots).all():
             report.notice("this load always holds: its bounds are beyond what there is.")
         return cls(setting, low, high, fields)
@@ -79,6 +80,14 @@ class Load(Rule):
         loads = rows.sum(axis=2)
         good: Mask = ((loads >= self._low) & (loads <= self._high)).all(axis=1)
         return good
+
+    def state(self, model: Statement) -> None:
+        """Count every unit's slots."""
+        slots = range(len(self._setting.kind.places.ids))
+        for unit, (low, high) in enumerate(zip(self._low.tolist(), self._high.tolist(), strict=True)):
+            if low > 0 or high < len(slots):
+                what = f"for {self._setting.frame.ids[unit]}"
+                model.sum(((1, model.at(unit, slot)) for slot in slots), low, high, what=what)
 
     def words(self) -> str:
         """Return for example "Each unit is on duty in between 1 and 3 slots."."""
@@ -101,20 +110,29 @@ class Load(Rule):
 
 
 def _per_unit(
-    bound: int | FromColumn | None, key: str, default: int, setting: Setting, report: Report
+    bound: int | FromColumn | None, key: str, mask: Mask | None, setting: Setting, report: Report
 ) -> NDArray[np.int64] | None:
-    size = setting.frame.size
+    """Return the bound of each matching unit, 0 for the others; None after reporting what is no number of slots."""
+    matching = np.ones(setting.frame.size, bool) if mask is None else mask
     if not isinstance(bound, FromColumn):
-        return np.full(size, default if bound is None else min(bound, 10**9), np.int64)
+        if bound is not None and bound < 0:
+            report.fault(key, "a number of slots is never negative.", found=bound, allowed="at least 0")
+            return None
+        return np.where(matching, min(bound or 0, 10**9), 0).astype(np.int64)
     if not setting.has_column(bound.column, key, report):
         return None
+    before = len(report.faults)
     texts = setting.frame.table.text(bound.column)
-    for row, text in enumerate(texts):
-        if not text.isdecimal():
-            where = f"{setting.frame.table.name}, {setting.frame.table.place(row, bound.column)}"
-            report.fault(key, f"{where}: this is no number of slots.", found=text)
-            return None
-    return np.array([int(text) for text in texts], np.int64)
+    for row in np.flatnonzero(matching).tolist():
+        text = texts[row]
+        if not (text.isascii() and text.isdecimal() and len(text) <= 9):
+            at = report.line(setting.frame.table, row, bound.column)
+            at.fault("", f"this is no number of slots, and {report.place} needs one.", found=text or "a blank")
+        if stopped(report, key, before):
+            break
+    if len(report.faults) > before:
+        return None
+    return np.array([int(text) if use else 0 for text, use in zip(texts, matching, strict=True)], np.int64)
 
 
 class _Counting(UnitAutomaton):

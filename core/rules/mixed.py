@@ -15,6 +15,7 @@ from core.process import Rows
 from core.reading import Report
 from core.rules import PAIRING, Case, Rule, heads
 from core.setting import RuleFields, Setting, bounds_words
+from core.statement import Statement
 
 
 class MixedFields(RuleFields):
@@ -41,16 +42,19 @@ class Mixed(Rule):
     def of(cls, fields: Any, setting: Setting, report: Report) -> Mixed | None:
         """Read the column."""
         pairs = setting.kind.units // 2
+        known = setting.has_column(fields.column, "column", report)
         if fields.min is None and fields.max is None:
             report.fault("min", "mixed needs min or max.", allowed="an integer of at least 0")
             return None
-        if not setting.has_column(fields.column, "column", report):
+        if not known:
             return None
         if fields.min is not None and fields.max is not None and fields.min > fields.max:
             report.fault("min", "min is above max.", found=f"min {fields.min}, max {fields.max}")
             return None
         if fields.min is not None and fields.min > pairs:
-            report.fault("min", f"this can never hold: there are {pairs} pairs.", found=fields.min)
+            report.fault(
+                "min", "this can never hold, there are not so many pairs.", found=fields.min, allowed=f"at most {pairs}"
+            )
             return None
         if (fields.min or 0) == 0 and (fields.max is None or fields.max >= pairs):
             report.notice("this rule always holds: its bounds are beyond the number of pairs.")
@@ -78,6 +82,12 @@ class Mixed(Rule):
         if self._fields.max is not None:
             good &= numbers <= self._fields.max
         return good
+
+    def state(self, model: Statement) -> None:
+        """Count the pairs that differ."""
+        differ = np.argwhere(np.triu(self._codes[:, None] != self._codes)).tolist()
+        what = f"pairs that differ in {self._fields.column}"
+        model.sum(((1, model.at(*pair)) for pair in differ), self._fields.min, self._fields.max, what=what)
 
     def words(self) -> str:
         """Return for example "At least 4 pairs join units with different country."."""

@@ -15,6 +15,7 @@ from core.process import Rows
 from core.reading import Report
 from core.rules import SELECTION, Case, Rule, heads
 from core.setting import RuleFields, Setting, Units
+from core.statement import Statement
 
 
 class NeedsFields(RuleFields):
@@ -68,6 +69,12 @@ class Needs(Rule):
     def effort(self) -> int:
         """One pass per unit."""
         return len(self._if) + len(self._then)
+
+    def state(self, model: Statement) -> None:
+        """Say of each unit of `then` that it is implied."""
+        condition = [model.at(unit, 0) for unit in self._if.tolist()]
+        for unit in self._then.tolist():
+            model.implies(condition, model.at(unit, 0))
 
     def words(self) -> str:
         """Return for example "If p1 is drawn, p2 is drawn too."."""

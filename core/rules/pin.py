@@ -12,7 +12,8 @@ from core.parts import Mask
 from core.process import Rows
 from core.reading import Report
 from core.rules import ASSIGNMENT, ORDER, PAIRING, ROSTER, SELECTION, Case, Rule
-from core.setting import Setting
+from core.setting import Setting, with_article
+from core.statement import Statement
 
 
 class Pin(Rule):
@@ -43,12 +44,13 @@ class Pin(Rule):
         named = setting.unit_words(units)
         if kind.name in (SELECTION, PAIRING):
             if fields.in_ is not None:
-                report.fault("in", f"a {kind.name} has no places.", found=fields.in_)
+                report.fault("in", f"{with_article(kind.name)} has no places.", found=fields.in_)
                 return None
             verb = "certainly drawn" if kind.name == SELECTION else "certainly paired"
             return cls(setting, units, [], f"{named} {'are' if len(units) > 1 else 'is'} {verb}.")
         if kind.name != ROSTER and fields.in_ is None:
-            report.fault("in", "this key is missing.", allowed=f"a list of {kind.places.word}s")
+            message = f"this key is missing, units need it in {with_article(kind.name)}."
+            report.fault("in", message, allowed=f"a list of {kind.places.word}s")
             return None
         places = setting.in_places(fields.in_, "in", report)
         if places is None:
@@ -93,6 +95,14 @@ class Pin(Rule):
         for choice in self._choices:
             good &= np.any([holds(self._setting.kind, rows, cell) for cell in choice], axis=0)
         return good
+
+    def state(self, model: Statement) -> None:
+        """Say that of each choice one cell is used."""
+        for unit in self._units:
+            selection = self._setting.kind.name == SELECTION
+            model.must(model.at(unit, 0) if selection else ~model.at(unit, self._setting.kind.units))
+        for choice in self._choices:
+            model.any_of(model.at(*cell) for cell in choice)
 
     def words(self) -> str:
         """Return for example "p1 and p2 are certainly drawn."."""

@@ -14,7 +14,8 @@ from core.parts import Count, Mask, Part
 from core.process import Rows
 from core.reading import FromColumn, Report
 from core.rules import ASSIGNMENT, ROSTER, SELECTION, Case, Rule, heads
-from core.setting import RuleFields, Scope, Setting, Where, scope_words, where_words
+from core.setting import RuleFields, Scope, Setting, Where, scope_terms, scope_words, where_words
+from core.statement import Statement
 
 
 class QuotaFields(RuleFields):
@@ -59,15 +60,17 @@ class Quota(Rule):
         loose = 0
         for scope in scopes:
             most = int(scope.units.sum()) * rule._times(scope)
-            name = scope.words or "in all"
-            if (scope.low or 0) < 0 or (scope.high or 0) < 0:
-                report.fault("min", f"{name}: a number of units cannot be negative.", allowed="at least 0")
-                return None
+            name = f"{scope.words}: " if scope.words else ""
+            for key, bound in (("min", scope.low), ("max", scope.high)):
+                if bound is not None and bound < 0:
+                    report.fault(key, f"{name}a number of units is never negative.", found=bound, allowed="at least 0")
+                    return None
             if scope.low is not None and scope.high is not None and scope.low > scope.high:
-                report.fault("min", f"{name}: min is above max.", found=f"min {scope.low}, max {scope.high}")
+                report.fault("min", f"{name}min is above max.", found=f"min {scope.low}, max {scope.high}")
                 return None
             if scope.low is not None and scope.low > most:
-                report.fault("min", f"{name}: this can never hold.", found=scope.low, allowed=f"at most {most}")
+                message = f"{name}this can never hold, there are not so many to count."
+                report.fault("min", message, found=scope.low, allowed=f"at most {most}")
                 return None
             loose += (scope.low or 0) == 0 and (scope.high is None or scope.high >= most)
         if loose == len(scopes):
@@ -112,6 +115,12 @@ class Quota(Rule):
     def effort(self) -> int:
         """One pass per scope."""
         return len(self._scopes)
+
+    def state(self, model: Statement) -> None:
+        """Count every scope."""
+        for scope in self._scopes:
+            what = f"in {scope.words}" if scope.words else ""
+            model.sum(scope_terms(self._kind, scope, scope.units, model), scope.low, scope.high, what=what)
 
     def words(self) -> str:
         """Return for example "Each slot has at least 1 unit with dept deck."."""

@@ -13,8 +13,9 @@ from core.kinds import Members
 from core.parts import Columns, Event, Mask, Part, UnitAutomaton
 from core.process import Rows
 from core.reading import Report
-from core.rules import ORDER, ROSTER, Case, Rule, heads
+from core.rules import ORDER, ROSTER, Case, Rule, heads, unit_groups
 from core.setting import RuleFields, Setting
+from core.statement import Statement
 
 
 class RunFields(RuleFields):
@@ -45,13 +46,17 @@ class Run(Rule):
         """Read the column of an order."""
         if setting.kind.name == ROSTER:
             if fields.alike is not None or fields.duties is not True:
-                report.fault("duties", "in a roster a run is about one unit's duties.", allowed="duties = true")
+                key = "duties" if fields.alike is None else "alike"
+                message = "in a roster, a run is about the duties of one unit."
+                report.fault(key, message, found=getattr(fields, key), allowed="duties = true, without alike")
                 return None
             if fields.max >= len(setting.kind.places.ids):
                 report.notice("this run always holds: there are no more slots than that.")
-            return cls(setting, fields.max, None, "")
+            return cls(setting, min(fields.max, len(setting.kind.places.ids)), None, "")
         if fields.alike is None or fields.duties is not None:
-            report.fault("alike", "in an order a run is about units alike.", allowed="alike = a column of the list")
+            key = "alike" if fields.duties is None else "duties"
+            message = "in an order, a run is about units alike."
+            report.fault(key, message, found=getattr(fields, key), allowed='alike = "a column", without duties')
             return None
         found = setting.values(fields.alike, "alike", report)
         if found is None:
@@ -62,9 +67,11 @@ class Run(Rule):
             others = setting.kind.units - count
             if count > (others + 1) * fields.max:
                 message = f"this can never hold: {count} of {setting.kind.units} units have {fields.alike} {name}."
-                report.fault("max", message, found=fields.max)
+                report.fault("max", message, found=fields.max, allowed=f"at least {-(-count // (others + 1))}")
                 return None
-        return cls(setting, fields.max, codes, fields.alike)
+        if np.bincount(codes[codes >= 0], minlength=1).max() <= fields.max:
+            report.notice("this run always holds: no more units than that are alike.")
+        return cls(setting, min(fields.max, setting.kind.units), codes, fields.alike)
 
     @classmethod
     def cases(cls) -> Sequence[Case]:
@@ -89,8 +96,16 @@ class Run(Rule):
         good = np.ones(len(rows), bool)
         for begin in range(slots - length + 1):
             whole = streak[..., begin : begin + length].all(axis=-1)
-            good &= ~whole.any(axis=tuple(range(1, whole.ndim)))
+            good &= ~np.any(whole, axis=tuple(range(1, whole.ndim)))
         return good
+
+    def state(self, model: Statement) -> None:
+        """Say of every stretch of `most` + 1 that not all of it is alike, or duty."""
+        places = range(len(self._setting.kind.places.ids))
+        stretches = [places[begin : begin + self._most + 1] for begin in places[: len(places) - self._most]]
+        for group in unit_groups(self._setting.kind.units, self._codes):
+            for stretch in stretches:
+                model.sum(((1, model.at(unit, place)) for unit in group for place in stretch), high=self._most)
 
     def words(self) -> str:
         """Return for example "No two units with the same theme stand in a row."."""

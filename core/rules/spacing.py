@@ -13,8 +13,9 @@ from core.kinds import Members
 from core.parts import Columns, Event, Mask, Part, UnitAutomaton
 from core.process import Rows
 from core.reading import Report
-from core.rules import ORDER, ROSTER, Case, Rule, heads
+from core.rules import ORDER, ROSTER, Case, Rule, heads, unit_groups
 from core.setting import RuleFields, Setting
+from core.statement import Statement
 
 
 class SpacingFields(RuleFields):
@@ -46,11 +47,12 @@ class Spacing(Rule):
             report.notice("this spacing always holds: min = 1 allows neighbours.")
         if setting.kind.name == ROSTER:
             if fields.alike is not None:
-                report.fault("alike", "in a roster, spacing is about one unit.", found=fields.alike)
+                message = "this key is for orders; in a roster, spacing is about the duties of one unit."
+                report.fault("alike", message, found=fields.alike, allowed="min alone")
                 return None
-            return cls(setting, fields.min, None, "")
+            return cls(setting, min(fields.min, max(2, len(setting.kind.places.ids))), None, "")
         if fields.alike is None:
-            report.fault("alike", "this key is missing.", allowed="a column of the list")
+            report.fault("alike", "this key is missing, an order needs it.", allowed="a column of the list")
             return None
         found = setting.values(fields.alike, "alike", report)
         if found is None:
@@ -59,10 +61,13 @@ class Spacing(Rule):
         most = int(counts.max())
         if (most - 1) * fields.min + 1 > setting.kind.units:
             value = found[1][int(counts.argmax())]
-            message = f"this can never hold: {most} units have {fields.alike} {value}."
-            report.fault("min", message, found=fields.min)
+            message = f"this can never hold: {most} of {setting.kind.units} units have {fields.alike} {value}."
+            limit = (setting.kind.units - 1) // (most - 1) if most > 1 else setting.kind.units
+            report.fault("min", message, found=fields.min, allowed=f"at most {limit}")
             return None
-        return cls(setting, fields.min, found[0], fields.alike)
+        if most < 2:
+            report.notice("this spacing always holds: no two units are alike.")
+        return cls(setting, min(fields.min, setting.kind.units), found[0], fields.alike)
 
     @classmethod
     def cases(cls) -> Sequence[Case]:
@@ -86,6 +91,14 @@ class Spacing(Rule):
         for gap in range(1, min(self._distance, rows.shape[1])):
             good &= ~((values[:, gap:] == values[:, :-gap]) & (values[:, gap:] >= 0)).any(axis=1)
         return good
+
+    def state(self, model: Statement) -> None:
+        """Say of every stretch of `distance` that at most one of it is alike, or duty."""
+        places = range(len(self._setting.kind.places.ids))
+        stretches = [places[begin : begin + self._distance] for begin in places[: len(places) - self._distance + 1]]
+        for group in unit_groups(self._setting.kind.units, self._codes):
+            for stretch in stretches if self._distance > 1 else []:
+                model.at_most_one(model.at(unit, place) for unit in group for place in stretch)
 
     def words(self) -> str:
         """Return for example "No unit is on duty in two slots less than 3 apart."."""

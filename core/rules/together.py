@@ -14,7 +14,8 @@ from core.parts import Columns, Count, Event, Mask, Part
 from core.process import Rows
 from core.reading import Report
 from core.rules import ASSIGNMENT, ORDER, PAIRING, ROSTER, SELECTION, Case, Rule, heads
-from core.setting import GroupFields, Setting, Units
+from core.setting import GroupFields, Setting, Units, group_key
+from core.statement import Statement
 
 _WORDS = {
     SELECTION: "Either all of {group} are drawn or none.",
@@ -51,7 +52,9 @@ class Together(Rule):
         if setting.kind.name == PAIRING:
             odd = next((g for g in groups if len(g) % 2), None)
             if odd is not None:
-                report.fault("", "an odd number of units cannot be paired among themselves.", found=len(odd))
+                message = "this can never hold: an odd number of units cannot be paired among themselves."
+                found = f"{len(odd)} units: {setting.unit_words(odd.tolist())}"
+                report.fault(group_key(fields), message, found=found, allowed="groups of an even number")
                 return None
         return cls(setting, groups, fields.alike)
 
@@ -100,6 +103,25 @@ class Together(Rule):
     def effort(self) -> int:
         """One pass per group."""
         return max(1, len(self._groups))
+
+    def state(self, model: Statement) -> None:
+        """Say of each group that its units are everywhere the same, or in an order that they make a block."""
+        places = range(len(self._kind.places.ids))
+        for group in (units.tolist() for units in self._groups):
+            if self._kind.name == PAIRING:
+                for unit in group:
+                    model.any_of(model.at(unit, partner) for partner in group if partner != unit)
+            elif self._kind.name == ORDER:
+                begins = [model.new() for _ in places[len(group) - 1 :]]
+                model.exactly_one(begins)
+                for place in places:
+                    # a member stands here if the block begins here or a little earlier, and nobody of it otherwise
+                    begun = begins[max(0, place - len(group) + 1) : place + 1]
+                    terms = [*((1, model.at(unit, place)) for unit in group), *((-1, begin) for begin in begun)]
+                    model.sum(terms, 0, 0)
+            else:
+                for place in places:
+                    model.same([model.at(unit, place) for unit in group])
 
     def words(self) -> str:
         """Return for example "Either all of p1 and p2 are drawn or none."."""

@@ -9,14 +9,14 @@ import numpy as np
 from numpy.typing import NDArray
 from pydantic import Field
 
-from core.errors import SheetError
 from core.frame import Amounts
 from core.kinds import Members
 from core.parts import Count, Mask, Part
 from core.process import Rows
 from core.reading import Bound, Report
 from core.rules import ASSIGNMENT, ROSTER, SELECTION, Case, Rule, heads
-from core.setting import RuleFields, Scope, Setting, Where, scope_words, where_words
+from core.setting import RuleFields, Scope, Setting, Where, scope_terms, scope_words, where_words
+from core.statement import Statement
 
 
 class TotalFields(RuleFields):
@@ -48,18 +48,18 @@ class Total(Rule):
     def of(cls, fields: Any, setting: Setting, report: Report) -> Total | None:
         """Read the column and the scopes, and compare the bounds with what there is."""
         mask = setting.where(fields.where, report, empty=fields.empty)
+        amounts = setting.amounts(fields.column, "column", report)
         if fields.min is None and fields.max is None:
             report.fault("min", "a total needs min or max.", allowed="a number")
             return None
-        if not setting.has_column(fields.column, "column", report) or mask is None:
-            return None
-        try:
-            amounts = setting.frame.amounts(fields.column)
-        except SheetError as error:
-            report.take(error)
+        if amounts is None or mask is None:
             return None
         scopes = setting.scopes(mask, fields.per, fields.in_, fields.min, fields.max, report, decimals=amounts.decimals)
         if scopes is None:
+            return None
+        times = len(setting.kind.places.ids) if setting.kind.name == ROSTER else 1
+        if int(np.abs(amounts.values).sum()) * times >= 1 << 62:
+            report.fault("column", "the numbers are too large to be added up over all slots.", found=fields.column)
             return None
         rule = cls(setting, scopes, amounts, fields)
         loose = [rule._looseness(i, report) for i in range(len(scopes))]
@@ -76,21 +76,18 @@ class Total(Rule):
         if self._kind.name == ROSTER:
             slots = len(self._kind.places.ids) if scope.places is None else len(scope.places)
         least, most = int(weights[weights < 0].sum()) * slots, int(weights[weights > 0].sum()) * slots
-        name = scope.words or "in all"
+        name = f"{scope.words}: " if scope.words else ""
         told = self._amounts.in_words
+        never = f"{name}this can never hold, whoever is counted."
         if scope.low is not None and scope.high is not None and scope.low > scope.high:
-            report.fault("min", f"{name}: min is above max.", found=f"{told(scope.low)} and {told(scope.high)}")
+            found = f"min {told(scope.low)}, max {told(scope.high)}"
+            report.fault("min", f"{name}min is above max.", found=found)
             return None
         if scope.low is not None and scope.low > most:
-            report.fault("min", f"{name}: this can never hold.", found=told(scope.low), allowed=f"at most {told(most)}")
+            report.fault("min", never, found=told(scope.low), allowed=f"at most {told(most)}")
             return None
         if scope.high is not None and scope.high < least:
-            report.fault(
-                "max",
-                f"{name}: this can never hold.",
-                found=told(scope.high),
-                allowed=f"at least {told(least)}",
-            )
+            report.fault("max", never, found=told(scope.high), allowed=f"at least {told(least)}")
             return None
         return (scope.low is None or scope.low <= least) and (scope.high is None or scope.high >= most)
 
@@ -126,6 +123,13 @@ class Total(Rule):
     def effort(self) -> int:
         """One pass per scope."""
         return len(self._scopes)
+
+    def state(self, model: Statement) -> None:
+        """Add up every scope."""
+        for scope, weights in zip(self._scopes, self._weights, strict=True):
+            what = f"of {self._fields.column}" + (f" in {scope.words}" if scope.words else "")
+            terms = scope_terms(self._kind, scope, weights, model)
+            model.sum(terms, scope.low, scope.high, what=what, decimals=self._amounts.decimals)
 
     def words(self) -> str:
         """Return for example "A total of at least 70000.00 of amount is drawn."."""

@@ -11,7 +11,8 @@ from core.kinds import Arrangement, Cells, OutcomeKind, join_labels
 from core.parts import Part
 from core.process import Process
 from core.rules import Rule
-from core.supersets.diagram import Diagram, build
+from core.supersets.build import build
+from core.supersets.diagram import Diagram
 
 ARRANGEMENTS = {
     "list": "in the order of the list",
@@ -25,7 +26,7 @@ ARRANGEMENTS = {
 def arrangements(kind: OutcomeKind) -> tuple[str, ...]:
     """Return the names of the orders of levels that make a difference for this kind."""
     if kind.name == "assignment":
-        return ("places, list", "near, places", "list, places")
+        return ("near, places", "places, list", "list, places")
     return ("near", "list") if kind.name in ("selection", "pairing") else ("list",)
 
 

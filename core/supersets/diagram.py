@@ -7,18 +7,18 @@ choices are one to one with outcomes), so their number is the sum over paths of 
 
 **The law.** Each node s has a potential W(s) > 0, a floating-point number with an exponent of its own, W(end) = 1, and
 W(s) = sum over its edges e of options(e) x W(child(e)) up to rounding. At s edge e is taken with probability
-k(e) / 2^64, where k(e) = max(1, ceil(S x share)), S = 2^64 - 2^28, share = options(e) W(child) / W(s) in floats. What is
+k(e) / 2^64, where k(e) = max(1, ceil(S x share)), S = 2^64 - 2^34, share = options(e) W(child) / W(s) in floats. What is
 left of 2^64 rejects the proposal. A finished path p is accepted with probability
 
-    a(p) = C x product of options / product of (k / 2^64),     C = (1 - 2^-35)^levels / W(start),
+    a(p) = C x product of options / product of (k / 2^64),     C = (1 - 2^-29)^levels / W(start),
 
 and its choices are uniform, so that every outcome of the diagram comes with probability exactly C, whatever was
 rounded. Needed is only a(p) <= 1. With u = 2^-53, a share is built by at most four roundings, so
-k / 2^64 >= (1 - 2^-36) (1 - u)^4 x share > (1 - 2^-35) x exact share, and the exact shares telescope to
+k / 2^64 >= (1 - 2^-30) (1 - u)^4 x share > (1 - 2^-29) x exact share, and the exact shares telescope to
 (product of options) / W(start). That proves a(p) <= 1. From above, an edge with k >= 2^40 has k / 2^64 <= exact share
-(the factor 1 - 2^-36 outweighs ceil and rounding), hence a(p) > 1 - levels x 2^-34 if all its edges are such: a 64-bit
+(the factor 1 - 2^-30 outweighs ceil and rounding), hence a(p) > 1 - levels x 2^-28 if all its edges are such: a 64-bit
 word below that bound accepts without more ado; the rare others are decided by exact fractions. The sum of a node's k is
-at most S (1 + (edges + 3) u') + edges <= 2^64 while a node has fewer than 2^15 edges (u' = 2 u). A level where no node has a choice
+at most S (1 + (edges + 3) u') + edges <= 2^64 while a node has fewer than 2^21 edges (u' = 2 u). A level where no node has a choice
 takes no bits: there k / 2^64 is 1 and the exact share differs from 1 by at most 2 u.
 
 Sums are made in a fixed order (numpy.bincount), all else is elementwise, integers, comparisons or powers of two: the
@@ -38,31 +38,31 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from core.parts import Columns, Event, Mask, Part
+from core.parts import Event, Mask
 from core.process import Process, Rows, lift_one, retrace
 from core.stream import Bits
 
-_SCALE = float(2**64 - 2**28)
-_TIGHT = 1 << 40
-_LOSS = Fraction(2**35 - 1, 2**35)
-_MOST_EDGES_OF_A_NODE = 1 << 15
+SCALE = float(2**64 - 2**34)
+TIGHT = 1 << 40
+_LOSS = Fraction(2**29 - 1, 2**29)
+MOST_EDGES_OF_A_NODE = 1 << 21
 
 
 class OverBudget(Exception):
-    """The diagram would need more edges than allowed; `level` of `levels` was reached."""
+    """The diagram would need more edges than allowed; `level` of `levels` was reached, having tried `events` events."""
 
-    def __init__(self, level: int, levels: int) -> None:
-        self.level, self.levels = level, levels
+    def __init__(self, level: int, levels: int, events: int) -> None:
+        self.level, self.levels, self.events = level, levels, events
         super().__init__(f"stopped at level {level} of {levels}")
 
 
 @dataclass
-class _Layer:
+class Layer:
     """Edges from the nodes of one level to those of the next, ordered by node and, within a node, by event."""
 
     source: NDArray[np.int32]
     child: NDArray[np.int32]
-    event: NDArray[np.int16]
+    event: NDArray[np.int32]
     pool: NDArray[np.int32]
     starts: NDArray[np.int64]
     limits: NDArray[np.uint64]
@@ -71,25 +71,44 @@ class _Layer:
 
     @property
     def nodes(self) -> int:
+        """Number of nodes of the level."""
         return len(self.starts) - 1
+
+
+# of the nodes of one level: mantissas in [0.5, 1) and exponents of two
+Potentials = tuple[NDArray[np.float64], NDArray[np.int64]]
 
 
 class Diagram:
     """The outcomes that a process and the built-in parts let through. Made by `build`.
 
+    `forgetful` says that a rule built in has been forgotten somewhere, so that it must be checked; `potentials` holds W
+    of every node, level by level. `tried` and `events` count the work of building: edges tried, and events applied to all
+    states of a level.
+
     Guarantee: exact. Every outcome comes from one path and one choice; `draw` gives each the same chance; `size` is
     an exact integer.
     """
 
-    def __init__(self, process: Process, layers: list[_Layer], root: tuple[float, int], steps: int) -> None:
+    def __init__(
+        self,
+        process: Process,
+        layers: list[Layer],
+        potentials: list[Potentials],
+        *,
+        tried: int,
+        events: int,
+        forgetful: bool = False,
+    ) -> None:
         self.process = process
         self._layers = layers
-        self._root = root
-        self.steps = steps
+        self.potentials = potentials
+        self.tried, self.events, self.forgetful = tried, events, forgetful
 
     def __getstate__(self) -> dict[str, Any]:
-        """Leave out the exact integers, which workers do not need."""
-        return {name: value for name, value in self.__dict__.items() if name != "completions"}
+        """Leave out what workers do not need: the exact integers, and all potentials but the first."""
+        kept = {name: value for name, value in self.__dict__.items() if name != "completions"}
+        return {**kept, "potentials": self.potentials[:1]}
 
     # -- what it is -------------------------------------------------------------------------------------------
 
@@ -116,13 +135,17 @@ class Diagram:
     @cached_property
     def weight(self) -> Fraction:
         """W(start) as an exact fraction: |outcomes| up to rounding."""
-        mantissa, exponent = self._root
-        return Fraction(mantissa) * Fraction(2) ** exponent
+        mantissa, exponent = self.potentials[0]
+        return Fraction(float(mantissa[0])) * Fraction(2) ** int(exponent[0]) if len(mantissa) else Fraction(0)
+
+    def layer(self, level: int) -> Layer:
+        """Return the edges of a level; not to be changed."""
+        return self._layers[level]
 
     @cached_property
     def digest(self) -> str:
-        """SHA-256 over all that decides a draw: events, children and limits of every level."""
-        total = hashlib.sha256()
+        """SHA-256 over all that decides a draw: W(start), and events, children and limits of every level."""
+        total = hashlib.sha256(str(self.weight).encode())
         for layer in self._layers:
             for array in (layer.child, layer.event, layer.pool, layer.starts, layer.limits):
                 total.update(array.astype(array.dtype.newbyteorder("<"), copy=False).tobytes())
@@ -130,7 +153,7 @@ class Diagram:
 
     # -- exact integers ---------------------------------------------------------------------------------------
 
-    def links(self, level: int) -> tuple[NDArray[np.int32], NDArray[np.int32], NDArray[np.int16], NDArray[np.int32]]:
+    def links(self, level: int) -> tuple[NDArray[np.int32], NDArray[np.int32], NDArray[np.int32], NDArray[np.int32]]:
         """Return source, child, event and pool of each edge of the level, by source and then by event; not to be changed.
 
         Each node of the level is the source, each node of the next level the child of at least one edge.
@@ -141,7 +164,7 @@ class Diagram:
     def options(self, level: int) -> NDArray[np.object_]:
         """Return binomial(pool, count) of each edge of the level as Python integers."""
         layer = self._layers[level]
-        exact, place = _exact_options(layer.event, layer.pool, self.process.levels[level].events)
+        exact, place = exact_options(layer.event, layer.pool, self.process.levels[level].events)
         options: NDArray[np.object_] = np.array(exact, object)[place]
         return options
 
@@ -246,7 +269,7 @@ class Diagram:
     @property
     def surely(self) -> int:
         """A word below this accepts a path all of whose edges are tight, whatever the exact fraction."""
-        return (1 << 64) - (self.levels << 30)
+        return (1 << 64) - (self.levels << 36)
 
     def accepts(self, edges: NDArray[np.int64], loose: Mask, words: NDArray[np.uint64], bits: Bits) -> Mask:
         """Return the verdict of the last acceptance, shape (batch,); exact.
@@ -272,7 +295,7 @@ class Diagram:
         nodes = np.zeros(count, np.int64)
         alive = np.ones(count, bool)
         loose = np.zeros(count, bool)
-        events = np.zeros((count, self.levels), np.int16)
+        events = np.zeros((count, self.levels), np.int32)
         edges = np.zeros((count, self.levels), np.int64)
         for level, layer in enumerate(self._layers):
             words = np.empty(0, np.uint64) if layer.forced else bits.words(count)
@@ -282,7 +305,7 @@ class Diagram:
             if layer.loose:
                 first = layer.starts[nodes] == edge
                 below = np.where(first, np.uint64(0), layer.limits[edge - 1])
-                loose |= layer.limits[edge] - below < _TIGHT
+                loose |= layer.limits[edge] - below < TIGHT
             edges[:, level] = edge
             events[:, level] = layer.event[edge]
             nodes = layer.child[edge].astype(np.int64)
@@ -341,215 +364,8 @@ class Diagram:
         return first_word(lambda w: chosen(w) > edge) - first_word(lambda w: chosen(w) >= edge)
 
 
-# -- building -------------------------------------------------------------------------------------------------
-
-
-def build(process: Process, parts: Sequence[Part], budget: int, tick: Callable[[], None] = lambda: None) -> Diagram:
-    """Return the diagram of a process under the parts.
-
-    Parameters
-    ----------
-    budget
-        The largest number of edges that may be tried.
-    tick
-        Called after each level; may raise to stop the work.
-
-    Raises
-    ------
-    OverBudget
-        if the diagram would need more edges.
-    """
-    for part in parts:
-        part.prepare(process.levels)
-    state = _State(process, [part for part in parts if part.last >= 0], budget)
-    raw: list[_Layer] = []
-    for level in range(len(process.levels)):
-        raw.append(state.expand(level))
-        tick()
-    return _weigh(process, raw, state, tick)
-
-
-class _State:
-    """All states of the current level: own columns of the process and the columns of each part that is alive."""
-
-    def __init__(self, process: Process, parts: Sequence[Part], budget: int) -> None:
-        self._process, self._parts, self._budget = process, parts, budget
-        self.size = 1
-        self.tried = 0
-        self._own: Columns = np.array(process.start, np.int64).reshape(-1, 1)
-        self._columns: dict[int, Columns] = {}
-
-    def expand(self, level: int) -> _Layer:
-        """Let every event of the level happen in every state; merge equal states; return the edges."""
-        if not self.size:
-            return _no_edges(0)
-        for i, part in enumerate(self._parts):
-            if part.first == level:
-                self._columns[i] = np.repeat(np.array(part.start, np.int64)[:, None], self.size, axis=1)
-        touched = [i for i in self._columns if level in self._parts[i].touched]
-        pieces = []
-        for index, event in enumerate(self._process.levels[level].events):
-            if any(self._parts[i].rules_out(event) for i in touched):
-                continue
-            piece = self._happen(level, index, event, touched)
-            if piece is not None:
-                pieces.append(piece)
-                self.tried += len(piece[1])
-                if self.tried > self._budget:
-                    raise OverBudget(level, len(self._process.levels))
-        return self._merge(level, pieces, touched)
-
-    def _happen(
-        self, level: int, index: int, event: Event, touched: list[int]
-    ) -> tuple[int, NDArray[np.int64], Columns, NDArray[np.int64], dict[int, Columns]] | None:
-        own, pool, alive = self._process.step(level, event, self._own)
-        columns = dict(self._columns)
-        for i in touched:
-            if self._parts[i].concerns(event):
-                columns[i], fine = self._parts[i].step(event, columns[i])
-                if fine is not None:
-                    alive = fine if alive is None else alive & fine
-        if alive is None:
-            return index, np.arange(self.size), own, pool, columns
-        kept = np.flatnonzero(alive)
-        if not kept.size:
-            return None
-        return index, kept, own[:, kept], pool[kept], {i: c[:, kept] for i, c in columns.items()}
-
-    def _merge(
-        self,
-        level: int,
-        pieces: list[tuple[int, NDArray[np.int64], Columns, NDArray[np.int64], dict[int, Columns]]],
-        touched: list[int],
-    ) -> _Layer:
-        nodes = self.size
-        if not pieces:
-            self.size = 0
-            return _no_edges(nodes)
-        event = np.concatenate([np.full(len(p[1]), p[0], np.int16) for p in pieces])
-        source = np.concatenate([p[1] for p in pieces])
-        own = np.concatenate([p[2] for p in pieces], axis=1)
-        pool = np.concatenate([p[3] for p in pieces]).astype(np.int32)
-        columns = {i: np.concatenate([p[4][i] for p in pieces], axis=1) for i in self._columns}
-        alive: Mask | None = None
-        for i in touched:
-            columns[i], fine = self._parts[i].settle(level, columns[i])
-            if fine is not None:
-                alive = fine if alive is None else alive & fine
-            if self._parts[i].last == level:
-                del columns[i]
-        if alive is not None and not alive.any():
-            self.size = 0
-            return _no_edges(nodes)
-        if alive is not None and not alive.all():
-            event, source, own, pool = event[alive], source[alive], own[:, alive], pool[alive]
-            columns = {i: c[:, alive] for i, c in columns.items()}
-        child, first = _number_equal([*own, *(row for c in columns.values() for row in c)], len(source))
-        self.size = len(first)
-        self._own = own[:, first]
-        self._columns = {i: c[:, first] for i, c in columns.items()}
-        # sources ascend within an event, so a stable sort by source keeps the events in order
-        order = np.argsort(source, kind="stable")
-        return _layer(source[order], child[order], event[order], pool[order], nodes)
-
-
-def _no_edges(nodes: int) -> _Layer:
-    empty = np.empty(0, np.int64)
-    return _layer(empty, empty, empty.astype(np.int16), empty.astype(np.int32), nodes)
-
-
-def _layer(
-    source: NDArray[np.int64],
-    child: NDArray[np.int64],
-    event: NDArray[np.int16],
-    pool: NDArray[np.int32],
-    nodes: int,
-) -> _Layer:
-    starts = np.zeros(nodes + 1, np.int64)
-    np.cumsum(np.bincount(source, minlength=nodes), out=starts[1:])
-    none = np.empty(0, np.uint64)
-    return _Layer(source.astype(np.int32), child.astype(np.int32), event, pool, starts, none, False, False)
-
-
-def _number_equal(rows: list[NDArray[np.int64]], count: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    """Return for each column of `rows` the number of its value, and for each number the first column that has it.
-
-    Numbers follow the order of the values, so they do not depend on how equal columns are found.
-    """
-    key = np.zeros(count, np.int64)
-    space = 1
-    for row in rows:
-        low = int(row.min())
-        span = int(row.max()) - low + 1
-        if span == 1:
-            continue
-        if space * span >= 1 << 62:
-            values, key = np.unique(key, return_inverse=True)
-            space = len(values)
-        key = key * span + (row - low)
-        space *= span
-    if space <= 4 * count + 1024:
-        seen = np.full(space, -1, np.int64)
-        seen[key[::-1]] = np.arange(count - 1, -1, -1)
-        present = np.flatnonzero(seen >= 0)
-        first = seen[present]
-        seen[present] = np.arange(len(present))
-        return seen[key], first
-    _, first, numbers = np.unique(key, return_index=True, return_inverse=True)
-    return numbers, first
-
-
-def _weigh(process: Process, raw: list[_Layer], state: _State, tick: Callable[[], None]) -> Diagram:
-    """Backward pass: drop what cannot end, compute the potentials and the limits of every edge."""
-    mantissa = np.ones(state.size)
-    exponent = np.zeros(state.size, np.int64)
-    renumber = np.arange(state.size)
-    layers = []
-    for level in range(len(raw) - 1, -1, -1):
-        layer = raw[level]
-        child = renumber[layer.child]
-        kept = child >= 0
-        source = layer.source[kept].astype(np.int64)
-        alive = np.bincount(source, minlength=layer.nodes) > 0
-        renumber = np.where(alive, np.cumsum(alive) - 1, -1)
-        layer = _layer(renumber[source], child[kept], layer.event[kept], layer.pool[kept], int(alive.sum()))
-        mantissa, exponent = _limit(layer, process.levels[level].events, mantissa, exponent)
-        layers.append(layer)
-        tick()
-    layers.reverse()
-    root = (float(mantissa[0]), int(exponent[0])) if layers and layers[0].nodes else (0.0, 0)
-    return Diagram(process, layers, root, state.tried)
-
-
-def _limit(
-    layer: _Layer, events: Sequence[Event], mantissa: NDArray[np.float64], exponent: NDArray[np.int64]
-) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
-    """Set the limits of the layer's edges; return the potentials of its nodes as mantissa and exponent."""
-    nodes = layer.nodes
-    if not nodes:
-        return np.empty(0), np.empty(0, np.int64)
-    widest = int(np.diff(layer.starts).max())
-    if widest >= _MOST_EDGES_OF_A_NODE:
-        raise ArithmeticError("a node has more edges than the certificate of the last acceptance allows")
-    ratio, power = _float_options(layer, events)
-    ratio = ratio * mantissa[layer.child]
-    power = power + exponent[layer.child]
-    top = np.maximum.reduceat(power, layer.starts[:-1])
-    value = np.ldexp(ratio, np.maximum(power - top[layer.source], -1070).astype(np.int32))
-    total = np.bincount(layer.source, weights=value, minlength=nodes)
-    layer.forced = widest == 1
-    if not layer.forced:
-        width = np.maximum(np.ceil(value / total[layer.source] * _SCALE), 1.0).astype(np.uint64)
-        running = np.cumsum(width)
-        before = np.concatenate([np.zeros(1, np.uint64), running])[layer.starts[:-1]]
-        layer.limits = running - before[layer.source]
-        layer.loose = bool((width < _TIGHT).any())
-    out_mantissa, out_power = np.frexp(total)
-    return out_mantissa, out_power + top
-
-
-def _exact_options(
-    event: NDArray[np.int16], pool: NDArray[np.int32], events: Sequence[Event]
+def exact_options(
+    event: NDArray[np.int32], pool: NDArray[np.int32], events: Sequence[Event]
 ) -> tuple[list[int], NDArray[np.int64]]:
     """Return the different values of binomial(pool, count), and for each edge the place of its value among them."""
     counts = [e.count for e in events]
@@ -559,9 +375,9 @@ def _exact_options(
     return [comb(code % span + low, counts[code // span]) for code in present.tolist()], place
 
 
-def _float_options(layer: _Layer, events: Sequence[Event]) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+def float_options(layer: Layer, events: Sequence[Event]) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
     """Return binomial(pool, count) of each edge as a correctly rounded mantissa in [0.5, 1] and an exponent."""
-    exact, place = _exact_options(layer.event, layer.pool, events)
+    exact, place = exact_options(layer.event, layer.pool, events)
     lengths = [number.bit_length() for number in exact]
     mantissa = np.array([number / (1 << length) for number, length in zip(exact, lengths, strict=True)])
     return mantissa[place], np.array(lengths, np.int64)[place]

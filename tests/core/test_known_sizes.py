@@ -29,7 +29,7 @@ from core.supersets.diagram import Diagram
 from core.tables import Table
 
 SECONDS = 10.0
-EDGES = 50_000_000
+EDGES = 100_000_000
 
 Row = dict[str, Any]
 Pairs = list[list[str]]
@@ -64,7 +64,7 @@ def built(stated: Sheet, arrangement: str | None = None) -> Diagram:
     seconds = time.process_time() - begun
     print(
         f"\n{stated.kind.name} of {stated.kind.units} units, {chosen}: {size:,} outcomes, {diagram.nodes:,} nodes, "
-        f"{diagram.edges:,} edges ({diagram.steps:,} tried), {building:.2f} s to build, {seconds:.2f} s in all",
+        f"{diagram.edges:,} edges ({diagram.tried:,} tried), {building:.2f} s to build, {seconds:.2f} s in all",
         end="",
     )
     assert seconds < SECONDS
