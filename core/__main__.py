@@ -106,7 +106,7 @@ class _Face:
     def __init__(self) -> None:
         self.json = False
         self.cancel = threading.Event()
-        self._began = time.monotonic()
+        self._began: float | None = None
         self._told = 0.0
         self._bar = sys.stderr.isatty()
 
@@ -118,11 +118,11 @@ class _Face:
     def progress(self, done: Any) -> None:
         """Show counts, and a forecast of the time left, a few times a second at most."""
         moment = time.monotonic()
-        if not done.proposed:
+        if self._began is None:
+            self._began = moment
+        if not done.proposed or moment - self._began < 0.5:
             return
-        if moment - self._told < (0.2 if self._bar else 2.0) and self._told:
-            return
-        if not self._told and moment - self._began < 0.5:
+        if self._told and moment - self._told < (0.2 if self._bar else 2.0):
             return
         self._told = moment
         share = done.accepted / max(1, done.wanted)
@@ -154,7 +154,7 @@ class _Face:
         if isinstance(error, Infeasible):
             for id, words in zip(error.rules, error.words, strict=True):
                 print(f"  {id}: {words}", file=sys.stderr)
-            if len(error.rules) > 1:
+            if len(error.rules) > 1 and error.minimal:
                 print("Each of them could stay if one of the others were loosened or switched off.", file=sys.stderr)
 
 
@@ -182,16 +182,15 @@ def _duration(seconds: float) -> str:
 def _plan(call: argparse.Namespace, face: _Face) -> int:
     from core import jobs
     from core.files import json_bytes, open_sheet, refuse_other, write_whole
-    from core.planner import make_plan
 
     if call.to is not None:
         refuse_other(call.to, "plan", "arrangement")
     sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
     face.remark(sheet.notices)
-    made = make_plan(sheet, outcomes=call.outcomes, memory=call.memory, tick=face.tick)
+    made, verdict = jobs.planned(sheet, call.outcomes, call.memory, face.tick)
     if call.to is not None:
         write_whole(call.to, json_bytes(made.plan.to_json()))
-    told = jobs.forecast(made)
+    told = jobs.forecast(made, verdict)
     face.show(_numbers(told), _plan_lines(sheet, made, told))
     return 0
 
@@ -206,9 +205,11 @@ def _numbers(told: dict[str, Any]) -> dict[str, Any]:
 
 
 def _plan_lines(sheet: Any, made: Any, told: dict[str, Any]) -> list[str]:
+    from core.record import treatment
+
     lines = [sheet.title or sheet.name, sheet.kind.words(), ""]
     for rule in sheet.rules:
-        where = "built in" if rule.id in made.plan.built_in else "checked"
+        where = treatment(made.plan, rule.id)
         lines.append(f"  {rule.id} ({where}): {rule.words()}")
     lines += [f"  {rule.id} (switched off): {rule.words}" for rule in sheet.off]
     lines += ["", *made.plan.words, f"Superset: {made.plan.about} outcomes."]
@@ -219,6 +220,8 @@ def _plan_lines(sheet: Any, made: Any, told: dict[str, Any]) -> list[str]:
             f"Acceptance in the pilot: {acceptance['estimate']:.4g}, between {acceptance['low']:.4g} and "
             f"{acceptance['high']:.4g} (95 %); {_per_outcome(acceptance)}."
         )
+    if told["verdict"] != "possible":
+        lines.append(f"{told['verdict'].capitalize()}.")
     lines.append(f"Plan digest: {told['plan_digest']}")
     return lines
 
@@ -261,7 +264,7 @@ def _draw(call: argparse.Namespace, face: _Face) -> int:
     result = jobs.draw_to_files(wish, cancelled=face.cancel.is_set, on_progress=face.progress, tick=face.tick)
     face.remark(result.sheet.notices)
     told = {
-        **jobs.forecast(result.ready),
+        **jobs.forecast(result.ready, result.verdict),
         "ledger": result.record["ledger"],
         "admissible": result.record["admissible"],
         "outcomes_file": str(result.outcomes_file),
@@ -300,11 +303,11 @@ def _outcome_lines(sheet: Any, rows: Any, most: int = 60) -> list[str]:
 def _chances(call: argparse.Namespace, face: _Face) -> int:
     from core.chances import inclusion
     from core.files import open_sheet
-    from core.planner import make_plan
+    from core.jobs import planned
 
     sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
     face.remark(sheet.notices)
-    made = make_plan(sheet, outcomes=10_000, memory=call.memory, tick=face.tick)
+    made, _ = planned(sheet, 10_000, call.memory, face.tick)
     told = inclusion(made, cells=call.cells, pairs=call.pairs, limit=call.limit, tick=face.tick)
     face.show(told.to_json(), _chance_lines(sheet, told))
     return 0

@@ -67,13 +67,19 @@ class CallError(LotwrightError):
 
 
 class Infeasible(LotwrightError):
-    """Proved: no outcome meets every rule. `rules` are the ids of a conflicting set, `words` their sentences."""
+    """Proved: no outcome meets every rule. `rules` are the ids of a conflicting set, `words` their sentences.
+
+    `minimal` is False if it was not decided whether each of them is needed.
+    """
 
     exit_code = 3
 
-    def __init__(self, message: str, rules: tuple[str, ...] = (), words: tuple[str, ...] = ()) -> None:
+    def __init__(
+        self, message: str, rules: tuple[str, ...] = (), words: tuple[str, ...] = (), *, minimal: bool = True
+    ) -> None:
         self.rules = rules
         self.words = words
+        self.minimal = minimal
         super().__init__(message)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import time
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -11,10 +12,11 @@ from typing import Any
 
 from core.drawbook import DrawBook
 from core.engine import Drawn, Progress, draw
-from core.errors import BrokenSeal, CallError, TooRare
+from core.errors import BrokenSeal, CallError, Infeasible, TooRare
+from core.feasibility import Inquiry, Verdict
 from core.files import json_bytes, open_sheet, outcomes_bytes, read_json, read_outcomes, write_whole
 from core.journal import FileJournal
-from core.ledger import interval
+from core.ledger import Ledger, interval
 from core.planner import Plan, Ready, Tick, make_plan, ready
 from core.record import (
     Party,
@@ -34,6 +36,10 @@ from core.supersets.diagram import OverBudget
 
 JOURNAL = "draw.journal"
 LARGEST_BLOCK = 1 << 16
+# After so many seconds of planning it is asked, beside it, whether the rules can hold at all.
+PATIENCE = 1.0
+# Where planning itself has proved that they cannot, so many seconds may go into saying why.
+EXPLAINING = 5.0
 
 
 def _go_on() -> None:
@@ -60,8 +66,8 @@ class Wish:
 # -- planning -------------------------------------------------------------------------------------------------------
 
 
-def forecast(made: Ready) -> dict[str, Any]:
-    """Return a plan as the command line's JSON."""
+def forecast(made: Ready, verdict: Verdict | None = None) -> dict[str, Any]:
+    """Return a plan as the command line's JSON; `verdict` as `planned` gives it."""
     plan, ledger = made.plan, pilot_ledger(made.plan)
     low, high = ledger.interval()
     exact = not plan.checked
@@ -74,9 +80,73 @@ def forecast(made: Ready) -> dict[str, Any]:
         if exact
         else {"estimate": ledger.acceptance, "low": low, "high": high},
         "admissible": admissible(plan, int(made.diagram.weight)),
-        "verdict": "possible" if exact or ledger.accepted else "rare or impossible: nothing was accepted in the pilot",
+        "verdict": _verdict_words(made, verdict),
         "plan_digest": plan.digest,
     }
+
+
+def _verdict_words(made: Ready, verdict: Verdict | None) -> str:
+    if not _is_doubtful(made):
+        return "possible"
+    if verdict is not None and verdict.state == "possible":
+        return "possible but rare: an outcome was found without drawing"
+    return "not decided: nothing was accepted in the pilot, and no outcome was found without drawing"
+
+
+def _is_doubtful(made: Ready) -> bool:
+    """Return whether the plan leaves open that there may be no outcome at all."""
+    return bool(made.plan.checked) and not made.plan.pilot["accepted"]
+
+
+def planned(sheet: Sheet, outcomes: int, memory: float, tick: Tick = _go_on) -> tuple[Ready, Verdict | None]:
+    """Return the sheet's plan, and if nothing was accepted in its pilot, whether the rules can hold at all.
+
+    The verdict depends on a clock, so it is no part of the plan: all that it can do is to end the work.
+
+    Raises
+    ------
+    Infeasible
+        if it is proved that they cannot.
+    """
+    began = time.monotonic()
+    with Inquiry(sheet) as inquiry:
+
+        def look() -> None:
+            tick()
+            if time.monotonic() > began + PATIENCE:
+                _refuse(sheet, inquiry.verdict())
+
+        try:
+            made = make_plan(sheet, outcomes=outcomes, memory=memory, tick=look)
+        except Infeasible as proof:
+            if proof.rules:
+                verdict = inquiry.wait(tick, EXPLAINING)
+                _refuse(sheet, verdict)
+                if verdict.state == "possible":
+                    raise RuntimeError("planning proved impossible what is possible") from proof
+            raise
+        return made, _decided(made, inquiry, tick)
+
+
+def _decided(made: Ready, inquiry: Inquiry, tick: Tick) -> Verdict | None:
+    """Return whether the rules can hold at all, if the plan leaves that open; Infeasible if they cannot."""
+    if not _is_doubtful(made):
+        return None
+    verdict = inquiry.wait(tick)
+    _refuse(made.sheet, verdict)
+    return verdict
+
+
+def _refuse(sheet: Sheet, verdict: Verdict | None) -> None:
+    """Raise what was proved, if it was proved that the rules cannot hold together."""
+    if verdict is None or verdict.state != "impossible":
+        return
+    number = len(verdict.conflict)
+    what = "this rule can never hold" if number == 1 else f"these {number} rules cannot hold together"
+    unsure = "" if verdict.minimal else " Perhaps not all of them are needed for that; there was no time to find out."
+    lines = [f"No outcome is possible: {what}.{unsure}", *verdict.changes]
+    words = tuple(sheet.rule(id).words() for id in verdict.conflict)
+    raise Infeasible("\n".join(lines), verdict.conflict, words, minimal=verdict.minimal)
 
 
 def read_plan(path: Path) -> Plan:
@@ -124,10 +194,8 @@ def _told_by_others(sheet: Sheet, plan: Plan, tick: Tick) -> Ready:
     return made
 
 
-def plan_for(sheet: Sheet, outcomes: int, memory: float, plan: Path | None, tick: Tick) -> Ready:
-    """Return the sheet's plan: made now, or read from a file and built again."""
-    if plan is None:
-        return make_plan(sheet, outcomes=outcomes, memory=memory, tick=tick)
+def _read_and_built(sheet: Sheet, plan: Path, tick: Tick) -> Ready:
+    """Return the plan in a file, its superset built again."""
     try:
         return _told_by_others(sheet, read_plan(plan), tick)
     except ValueError as error:
@@ -157,7 +225,7 @@ def freeze(
     sheet = open_sheet(path, allow_outside=allow_outside)
     book = book_of(path)
     entries = book.entries()
-    made = make_plan(sheet, outcomes=outcomes, memory=memory, tick=tick)
+    made, _ = planned(sheet, outcomes, memory, tick)
     content = frozen_of(sheet, made.plan)
     target = frozen_path(path)
     last = next((e["digest"] for e in reversed(entries) if e["event"] == "freeze"), None)
@@ -219,11 +287,12 @@ def _frozen(path: Path, sheet: Sheet) -> _Frozen | None:
 
 @dataclass(frozen=True, eq=False)
 class Result:
-    """A finished draw: its record, and where the files are."""
+    """A finished draw: its record, and where the files are; `verdict` as `planned` gives it."""
 
     record: dict[str, Any]
     sheet: Sheet
     ready: Ready
+    verdict: Verdict | None
     drawn: Drawn
     outcomes_file: Path
     record_file: Path
@@ -249,7 +318,7 @@ def draw_to_files(
     _refuse_finished(wish)
     frozen = _frozen(wish.sheet, sheet)
     outcomes = wish.outcomes or (frozen.plan.outcomes if frozen else 1)
-    made = _ready(wish, sheet, frozen, outcomes, tick)
+    made, verdict = _ready(wish, sheet, frozen, outcomes, tick)
     key = make_key("draw", frozen.digest if frozen else sheet.digest, wish.parties)
     identity = {
         "plan": made.plan.digest,
@@ -269,7 +338,7 @@ def draw_to_files(
             on_progress=on_progress,
         )
         if not drawn.complete:
-            raise _too_rare(drawn, outcomes)
+            raise _too_rare(drawn, outcomes, verdict)
         record, data = _recorded(wish, made, drawn, frozen, about)
         write_whole(wish.folder / "outcomes.csv", data)
         write_whole(wish.folder / "record.json", json_bytes(record))
@@ -279,7 +348,7 @@ def draw_to_files(
     except BaseException:
         journal.close()
         raise
-    return Result(record, sheet, made, drawn, wish.folder / "outcomes.csv", wish.folder / "record.json")
+    return Result(record, sheet, made, verdict, drawn, wish.folder / "outcomes.csv", wish.folder / "record.json")
 
 
 def _enter_drawn(book: DrawBook, number: int, record: str) -> None:
@@ -297,9 +366,20 @@ def _refuse_finished(wish: Wish) -> None:
         raise CallError(f"{folder} is a file, not a folder. Choose another folder (--to).")
 
 
-def _ready(wish: Wish, sheet: Sheet, frozen: _Frozen | None, outcomes: int, tick: Tick) -> Ready:
+def _ready(wish: Wish, sheet: Sheet, frozen: _Frozen | None, outcomes: int, tick: Tick) -> tuple[Ready, Verdict | None]:
+    """Return the plan to draw by: made now, read or frozen; the verdict as `planned` gives it."""
+    if frozen is None and wish.plan is None:
+        return planned(sheet, outcomes, wish.memory, tick)
+    made = _given(wish, sheet, frozen, outcomes, tick)
+    with Inquiry(sheet) as inquiry:
+        return made, _decided(made, inquiry, tick)
+
+
+def _given(wish: Wish, sheet: Sheet, frozen: _Frozen | None, outcomes: int, tick: Tick) -> Ready:
+    """Return the plan that is frozen or in a file, its superset built again."""
     if frozen is None:
-        return plan_for(sheet, outcomes, wish.memory, wish.plan, tick)
+        assert wish.plan is not None
+        return _read_and_built(sheet, wish.plan, tick)
     if wish.plan is not None and read_plan(wish.plan).digest != frozen.plan.digest:
         raise CallError("The sheet is frozen with another plan; leave out --plan.")
     if outcomes != frozen.plan.outcomes:
@@ -361,17 +441,36 @@ def _recorded(
     return record, data
 
 
-def _too_rare(drawn: Drawn, outcomes: int) -> TooRare:
+def _too_rare(drawn: Drawn, outcomes: int, verdict: Verdict | None) -> TooRare:
     ledger = drawn.ledger
     bound = interval(ledger.accepted, ledger.proposed)[1]
-    worst = max(ledger.rules, key=lambda id: ledger.rules[id].first, default="")
-    blame = f" Most proposals were rejected first by rule {worst}." if worst else ""
-    return TooRare(
-        f"Stopped at the limit: {ledger.accepted:,} of {outcomes:,} outcomes accepted in {ledger.proposed:,} proposals. "
-        f"An admissible outcome is rarer than 1 in {int(1 / bound):,} of the superset (97.5 % sure).{blame} "
+    told = [
+        f"Stopped at the limit: {ledger.accepted:,} of {outcomes:,} outcomes accepted in {ledger.proposed:,} proposals.",
+        f"An admissible outcome is rarer than 1 in {int(1 / bound):,} of the superset (97.5 % sure).",
+        "" if ledger.accepted else _existence(verdict),
+        _best_lifted(ledger),
         "Raise --limit and go on with --resume, give planning more (--outcomes), or loosen a rule.",
-        bound,
-    )
+    ]
+    return TooRare(" ".join(filter(None, told)), bound)
+
+
+def _existence(verdict: Verdict | None) -> str:
+    """Return whether there is an outcome although the draw accepted none."""
+    if verdict is None:
+        return "There are outcomes: the pilot accepted some."
+    if verdict.state == "possible":
+        return "There is one: it was found without drawing."
+    return "Whether there is one at all is not decided."
+
+
+def _best_lifted(ledger: Ledger) -> str:
+    """Return which check keeps most outcomes away, as far as the ledger can tell."""
+    lifted = {id: share for id in ledger.rules if (share := ledger.lifted(id))}
+    if lifted:
+        best = max(lifted, key=lifted.__getitem__)
+        return f"Lifting rule {best} would help most: about {lifted[best]:.2g} of the proposals would be accepted."
+    worst = max(ledger.rules, key=lambda id: ledger.rules[id].first, default="")
+    return f"Most proposals were rejected first by rule {worst}." if worst else ""
 
 
 # -- checking and verifying -----------------------------------------------------------------------------------------

@@ -17,7 +17,7 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import Any
 
-from core.errors import Infeasible
+from core.errors import Infeasible, TooRare
 from core.ledger import Ledger
 from core.proposals import run_block
 from core.rules import Rule
@@ -40,6 +40,8 @@ BUDGETS = (50_000, 500_000, 5_000_000, 50_000_000)
 ALWAYS = 300_000_000
 # Plans are made for at least so many outcomes: size and chances are estimated from about as many.
 FEWEST = 1000
+# A diagram partly built in takes about so many edges for each node per level that remembers.
+EDGES_PER_WIDTH = 500
 PILOT = 1024
 LONGEST_PILOT = 32 * PILOT
 WANTED_IN_PILOT = 50
@@ -63,8 +65,9 @@ class Plan:
         What was asked: how many outcomes, and GiB.
     arrangement
         Name of the order of levels.
-    built_in, checked
-        Ids of the rules built in, and of those checked in the order of checking.
+    built_in, partly, checked
+        Ids of the rules built in; of those built in for the heavy nodes of each level only, with the number of such nodes;
+        and of those checked, in the order of checking. A rule partly built in is checked too, unless no node forgot it.
     block
         Proposals per block.
     edges, nodes
@@ -85,6 +88,7 @@ class Plan:
     memory: float
     arrangement: str
     built_in: tuple[str, ...]
+    partly: tuple[tuple[str, int], ...]
     checked: tuple[str, ...]
     block: int
     edges: int
@@ -104,6 +108,7 @@ class Plan:
             "memory": str(self.memory),
             "arrangement": self.arrangement,
             "built_in": list(self.built_in),
+            "partly": [list(item) for item in self.partly],
             "checked": list(self.checked),
             "block": self.block,
             "edges": self.edges,
@@ -126,6 +131,7 @@ class Plan:
             memory=float(value["memory"]),
             arrangement=str(value["arrangement"]),
             built_in=tuple(map(str, value["built_in"])),
+            partly=tuple((str(id), int(width)) for id, width in value["partly"]),
             checked=tuple(map(str, value["checked"])),
             block=int(value["block"]),
             edges=int(value["edges"]),
@@ -153,11 +159,17 @@ class Ready:
     checks: tuple[Rule, ...]
 
 
+# Rules built in for the heavy nodes only, each with the number of nodes per level that remember it.
+Partly = tuple[tuple[Rule, int], ...]
+
+
 @dataclass
 class _Candidate:
     rules: tuple[Rule, ...]
+    partly: Partly
     diagram: Diagram
     arrangement: str
+    checks: tuple[Rule, ...]
     pilot: Ledger
     steps: int
     per_proposal: int
@@ -176,6 +188,9 @@ class _Candidate:
         return self.steps + outcomes * self.per_proposal / self.acceptance()
 
 
+_Name = tuple[tuple[str, ...], tuple[tuple[str, int], ...]]
+
+
 @dataclass
 class _Search:
     sheet: Sheet
@@ -183,35 +198,41 @@ class _Search:
     memory: float
     tick: Tick
     spent: int = 0  # steps, over all attempts
-    tried: dict[tuple[str, ...], int] = field(default_factory=dict)
-    found: dict[tuple[str, ...], _Candidate] = field(default_factory=dict)
+    tried: dict[_Name, int] = field(default_factory=dict)
+    found: dict[_Name, _Candidate] = field(default_factory=dict)
 
     def best(self) -> _Candidate:
-        return min(self.found.values(), key=lambda c: (c.cost(self.outcomes), [r.id for r in c.rules]))
+        return min(self.found.values(), key=lambda c: (c.cost(self.outcomes), _name(c.rules, c.partly)))
 
-    def attempt(self, rules: Sequence[Rule], budget: int, arrangement: str = "") -> _Candidate | None:
+    def attempt(
+        self, rules: Sequence[Rule], budget: int, arrangement: str = "", partly: Partly = ()
+    ) -> _Candidate | None:
         """Return the candidate that builds in these rules, or None if it would need more edges than `budget`.
 
         All orders of levels are tried, or only the one named.
         """
         chosen = tuple(rule for rule in self.sheet.rules if rule in rules)
-        ids = tuple(rule.id for rule in chosen)
-        if ids in self.found:
-            return self.found[ids]
-        if self.tried.get(ids, -1) >= budget or (self.found and self.spent > self.allowance()):
+        name = _name(chosen, partly)
+        if name in self.found:
+            return self.found[name]
+        if self.tried.get(name, -1) >= budget or (self.found and self.spent > self.allowance()):
             return None
-        self.tried[ids] = budget
-        names = [arrangement] if arrangement else arrangements(self.sheet.kind)
-        smallest = self._smallest(chosen, budget, names)
+        self.tried[name] = budget
+        smallest = self._smallest(chosen, partly, budget, [arrangement] if arrangement else self._orders())
         if smallest is None:
             return None
-        diagram, best_arrangement = smallest
+        diagram, order = smallest
         if diagram.is_empty:
-            raise _impossible(self.sheet, chosen, best_arrangement, budget, self.tick)
-        self.found[ids] = self._piloted(chosen, diagram, best_arrangement)
-        return self.found[ids]
+            raise _impossible(self.sheet, (*chosen, *(rule for rule, _ in partly)), order, budget, self.tick)
+        self.found[name] = self._piloted(chosen, partly, diagram, order)
+        return self.found[name]
 
-    def _smallest(self, chosen: tuple[Rule, ...], budget: int, names: Sequence[str]) -> tuple[Diagram, str] | None:
+    def _orders(self) -> Sequence[str]:
+        return arrangements(self.sheet.kind)
+
+    def _smallest(
+        self, chosen: tuple[Rule, ...], partly: Partly, budget: int, names: Sequence[str]
+    ) -> tuple[Diagram, str] | None:
         """Return the smallest diagram of these rules over these orders of levels."""
         found: tuple[Diagram, str] | None = None
         for arrangement in names:
@@ -219,7 +240,7 @@ class _Search:
                 break
             limit = budget if found is None else found[0].tried - 1
             try:
-                diagram = superset(self.sheet.kind, chosen, arrangement, budget=limit, tick=self.tick)
+                diagram = superset(self.sheet.kind, chosen, arrangement, partly=partly, budget=limit, tick=self.tick)
             except OverBudget as over:
                 self.spent += limit * STEPS_PER_EDGE + over.events * STEPS_PER_EVENT
                 continue
@@ -227,21 +248,23 @@ class _Search:
             found = diagram, arrangement
         return found
 
-    def _piloted(self, chosen: tuple[Rule, ...], diagram: Diagram, arrangement: str) -> _Candidate:
-        checks = [rule for rule in self.sheet.rules if rule not in chosen]
+    def _piloted(self, chosen: tuple[Rule, ...], partly: Partly, diagram: Diagram, arrangement: str) -> _Candidate:
+        # where no node has forgotten, what is partly built in holds everywhere
+        held = chosen if diagram.forgetful else (*chosen, *(rule for rule, _ in partly))
+        checks = tuple(rule for rule in self.sheet.rules if rule not in held)
         pilot = run_pilot(self.sheet, diagram, checks, PILOT, "pilot")
         width = self.sheet.kind.width
         per_proposal = diagram.levels * STEPS_PER_LEVEL + width * STEPS_PER_ELEMENT
         per_proposal += sum(rule.effort() for rule in checks) * width * STEPS_PER_CHECK
         self.spent += PILOT * per_proposal
-        return _Candidate(chosen, diagram, arrangement, pilot, _building(diagram), per_proposal)
+        return _Candidate(chosen, partly, diagram, arrangement, checks, pilot, _building(diagram), per_proposal)
 
     def run(self) -> _Candidate:
         """Search within wider and wider budgets; return the cheapest candidate."""
         largest = int(self.memory * 2**30) // BYTES_PER_EDGE
         self.attempt((), largest)
         if not self.found:
-            raise Infeasible("Planning needs more memory than allowed even without building in a rule; raise --memory.")
+            raise TooRare("Planning needs more memory than allowed even without building in a rule; raise --memory.")
         for step in BUDGETS:
             budget = min(step, largest)
             if self.spent > self.allowance():
@@ -258,20 +281,30 @@ class _Search:
         return max(ALWAYS, self.best().cost(self.outcomes))
 
     def _grow(self, budget: int) -> None:
-        """Build in one rule more at a time, the one that rejects most first, while the budget holds them."""
+        """Build in one rule more at a time, the one that rejects most first, as far as the budget holds them.
+
+        What does not fit as a whole is tried partly: with as many nodes per level that remember it as the budget allows.
+        """
         current = self.best()
-        left = [rule for rule in self.sheet.rules if rule not in current.rules]
+        left = [rule for rule in current.checks if rule not in [r for r, _ in current.partly]]
         while left:
             counts = current.pilot.rules
-            left.sort(key=lambda rule: (-counts[rule.id].any, rule.id))
+            left.sort(key=lambda rule: (-counts[rule.id].any if rule.id in counts else 0, rule.id))
             rule = left.pop(0)
-            if not counts[rule.id].any:
+            if rule.id not in counts or not counts[rule.id].any:
                 return
             # the first rule settles the order of levels
-            order = current.arrangement if current.rules else ""
-            candidate = self.attempt((*current.rules, rule), budget, order)
+            order = current.arrangement if current.rules or current.partly else ""
+            candidate = self.attempt((*current.rules, rule), budget, order, current.partly)
+            if candidate is None and budget > BUDGETS[0] and rule.counts_along():
+                partly = (*current.partly, (rule, budget // EDGES_PER_WIDTH))
+                candidate = self.attempt(current.rules, budget, order, partly)
             if candidate is not None and candidate.cost(self.outcomes) < current.cost(self.outcomes):
                 current = candidate
+
+
+def _name(rules: Sequence[Rule], partly: Partly) -> _Name:
+    return tuple(rule.id for rule in rules), tuple((rule.id, width) for rule, width in partly)
 
 
 def _building(diagram: Diagram) -> int:
@@ -314,7 +347,7 @@ def make_plan(sheet: Sheet, *, outcomes: int = 1, memory: float = 4.0, tick: Tic
     """
     search = _Search(sheet, max(outcomes, FEWEST), memory, tick)
     best = search.run()
-    checks = [rule for rule in sheet.rules if rule not in best.rules]
+    checks = list(best.checks)
     # the search chose by its own pilots, so a fresh one says what to expect; its size is fixed before it is made
     proposals = PILOT
     while checks and proposals < LONGEST_PILOT and proposals * best.acceptance() < WANTED_IN_PILOT:
@@ -329,6 +362,7 @@ def make_plan(sheet: Sheet, *, outcomes: int = 1, memory: float = 4.0, tick: Tic
         memory=memory,
         arrangement=best.arrangement,
         built_in=tuple(rule.id for rule in best.rules),
+        partly=tuple((rule.id, width) for rule, width in best.partly),
         checked=tuple(rule.id for rule in checks),
         block=_block_size(sheet, outcomes, max(best.acceptance(), 1e-6)),
         edges=best.diagram.edges,
@@ -353,11 +387,15 @@ def ready(sheet: Sheet, plan: Plan, *, tick: Tick = lambda: None) -> Ready:
     if plan.sheet != sheet.digest:
         raise ValueError("the plan was made for another sheet")
     known = {rule.id: rule for rule in sheet.rules}
-    if sorted(plan.built_in + plan.checked) != sorted(known) or plan.arrangement not in ARRANGEMENTS:
+    named = {*plan.built_in, *plan.checked, *(id for id, _ in plan.partly)}
+    if named != set(known) or plan.arrangement not in ARRANGEMENTS:
         raise ValueError("the plan names other rules than the sheet")
     largest = int(plan.memory * 2**30) // BYTES_PER_EDGE
     built_in = [rule for rule in sheet.rules if rule.id in plan.built_in]
-    diagram = superset(sheet.kind, built_in, plan.arrangement, budget=largest, tick=tick)
+    partly = [(known[id], width) for id, width in plan.partly]
+    diagram = superset(sheet.kind, built_in, plan.arrangement, partly=partly, budget=largest, tick=tick)
+    if diagram.forgetful and not {id for id, _ in plan.partly} <= set(plan.checked):
+        raise ValueError("the plan leaves a rule unchecked that is built in only partly")
     if diagram.digest != plan.superset:
         raise ValueError("the superset comes out differently here than when the plan was made")
     return Ready(sheet, plan, diagram, tuple(known[id] for id in plan.checked))
@@ -398,21 +436,27 @@ def _pilot_json(pilot: Ledger, ids: Sequence[str]) -> dict[str, Any]:
 def _reasons(search: _Search, best: _Candidate) -> tuple[str, ...]:
     """Return in sentences why the plan is as it is."""
     rules = search.sheet.rules
-    checks = [rule for rule in rules if rule not in best.rules]
     words = [f"The superset is built level by level, {ARRANGEMENTS[best.arrangement]}."]
-    if not checks:
+    if not best.checks:
         words.append("Every rule is built in: each proposal is an outcome, and the number of outcomes is exact.")
         return tuple(words)
-    for rule in checks:
+    widths = {rule.id: width for rule, width in best.partly}
+    for rule in best.checks:
         count = best.pilot.rules[rule.id]
         share = f"rejects {100 * count.any / max(1, best.pilot.sampled):.3g} % of the pilot's proposals"
-        ids = tuple(r.id for r in rules if r in best.rules or r is rule)
+        name = _name([r for r in rules if r in best.rules or r is rule], best.partly)
+        if rule.id in widths:
+            words.append(
+                f"Rule {rule.id} is built in partly, for the {widths[rule.id]:,} most likely states of each level, and "
+                f"checked ({share}): more states remembered would take longer than they save."
+            )
+            continue
         if not count.any:
             reason = "it rejected nothing in the pilot, so building it in would gain nothing"
-        elif ids in search.found:
+        elif name in search.found:
             reason = "building it in would take longer than it saves"
-        elif ids in search.tried:
-            reason = f"built in, it would need more than {search.tried[ids]:,} edges"
+        elif name in search.tried:
+            reason = f"built in, it would need more than {search.tried[name]:,} edges"
         else:
             reason = "another choice of rules is cheaper"
         words.append(f"Rule {rule.id} is checked ({share}): {reason}.")

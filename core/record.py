@@ -218,6 +218,15 @@ def cautions(sheet: Sheet, *, frozen: bool, number: int, bits: float, needed: fl
     return told
 
 
+def treatment(plan: Plan, id: str) -> str:
+    """Return how the plan treats a rule, in words."""
+    if id in plan.built_in:
+        return "built in"
+    if any(id == part for part, _ in plan.partly):
+        return "built in, partly" if id in plan.checked else "built in"
+    return "checked"
+
+
 def rules_of(sheet: Sheet, plan: Plan) -> list[dict[str, Any]]:
     """Return every rule in words and how it is treated."""
     told = [
@@ -225,7 +234,7 @@ def rules_of(sheet: Sheet, plan: Plan) -> list[dict[str, Any]]:
             "id": rule.id,
             "kind": rule.name,
             "words": rule.words(),
-            "treatment": "built in" if rule.id in plan.built_in else "checked",
+            "treatment": treatment(plan, rule.id),
             "note": rule.note,
         }
         for rule in sheet.rules

@@ -24,8 +24,8 @@ KIND = -1
 class Sum:
     """The sum of coefficients times literals (true 1, false 0) lies within `low` and `high`, inclusive; None is no bound.
 
-    `what` tells in words what is counted, if the bounds are numbers of the sheet ("in slot w3"), else it is None; the bounds
-    are then numbers of the sheet times 10^decimals.
+    `what` tells in words what is counted, with "{s}" for a plural, if the bounds are numbers of the sheet: "in slot w3",
+    "pair{s} differing in country". They are then the sheet's numbers times 10^decimals. Else `what` is None.
     """
 
     speaker: int
@@ -52,6 +52,9 @@ class MostOne:
     literals: tuple[Literal, ...]
 
 
+Sentence = Sum | AnyOf | MostOne
+
+
 class Statement:
     """What was said so far.
 
@@ -69,7 +72,7 @@ class Statement:
         """Begin with the variables of the cells, numbered from 1: int64, shape `OutcomeKind.cells`."""
         self._cells: list[list[int]] = variables.tolist()
         self.size = int(variables.max(initial=0)) + 1
-        self.said: list[Sum | AnyOf | MostOne] = []
+        self.said: list[Sentence] = []
         self.speaker = KIND
 
     def at(self, unit: int, place: int) -> Literal:

@@ -164,7 +164,7 @@ class Assignment(OutcomeKind):
 
     def row(self, used: Mask) -> Rows:
         """Return each unit's place."""
-        return used.argmax(axis=1).astype(np.int32)
+        return np.asarray(used.argmax(axis=1), np.int32)
 
 
 def _hint(places: Places, report: Report) -> None:

@@ -101,7 +101,7 @@ class Order(OutcomeKind):
 
     def row(self, used: Mask) -> Rows:
         """Return the unit at each position."""
-        return used.argmax(axis=0).astype(np.int32)
+        return np.asarray(used.argmax(axis=0), np.int32)
 
 
 class _Lining(Taking):

@@ -97,6 +97,10 @@ class Rule(ABC):
         """Return the parts that hold the rule over these groups of units, or None if it can only be checked."""
         return None
 
+    def counts_along(self) -> bool:
+        """Return whether the rule is held by parts alone, so that it can also be built in for some states only."""
+        return bool(self.labels()) and self.cells() is None and self.automaton() is None
+
     def cells(self) -> tuple[Mask, Mask] | None:
         """Return which cells the rule leaves open (may) and which it demands (must), or None."""
         return None

@@ -94,7 +94,9 @@ class Distinct(Rule):
             seen = [model.new() for _ in holders]
             for value, units in zip(seen, holders, strict=True):
                 model.any_of([~value, *(model.at(unit, place) for unit in units)])
-            what = f"different values of {self._fields.column}" + (f" in {places.word} {name}" if places.word else "")
+            what = f"different value{{s}} of {self._fields.column}" + (
+                f" in {places.word} {name}" if places.word else ""
+            )
             model.sum(((1, value) for value in seen), self._fields.min, what=what)
 
     def words(self) -> str:

@@ -86,7 +86,7 @@ class Mixed(Rule):
     def state(self, model: Statement) -> None:
         """Count the pairs that differ."""
         differ = np.argwhere(np.triu(self._codes[:, None] != self._codes)).tolist()
-        what = f"pairs that differ in {self._fields.column}"
+        what = f"pair{{s}} differing in {self._fields.column}"
         model.sum(((1, model.at(*pair)) for pair in differ), self._fields.min, self._fields.max, what=what)
 
     def words(self) -> str:

@@ -25,6 +25,7 @@ def unbuilt(sheet: Sheet, *, outcomes: int = 1, block: int = 256) -> Ready:
         memory=4.0,
         arrangement=arrangement,
         built_in=(),
+        partly=(),
         checked=tuple(rule.id for rule in sheet.rules),
         block=block,
         edges=diagram.edges,

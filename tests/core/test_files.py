@@ -86,7 +86,7 @@ def test_outcomes_there_and_back(outcome: Row, tmp_path: Path) -> None:
     found = read_outcomes(sheet, path)
     assert [name for name, _ in found] == [str(number) for number in range(1, len(rows) + 1)]
     assert all(not isinstance(row, str) for _, row in found), found
-    assert (np.stack([row for _, row in found]) == rows).all()  # type: ignore[misc]
+    assert (np.stack([row for _, row in found]) == rows).all()
 
 
 @pytest.mark.parametrize("outcome", KINDS, ids=lambda row: "-".join(map(str, row.values())))

@@ -398,8 +398,8 @@ def test_one_workbook_with_two_worksheets(tmp_path: Path) -> None:
     for line in (["badge"], ["p1"], ["p2"]):
         book.active.append(line)
     weeks = book.create_sheet("weeks")
-    for line in (["slot", "need"], ["w1", 1]):
-        weeks.append(line)
+    weeks.append(["slot", "need"])
+    weeks.append(["w1", 1])
     book.save(tmp_path / "book.xlsx")
     (tmp_path / "sheet.toml").write_text(
         'format = 1\nframe = {file = "book.xlsx", worksheet = "crew", id = "badge"}\n[outcome]\nkind = "roster"\n'
