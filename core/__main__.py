@@ -180,17 +180,17 @@ def _duration(seconds: float) -> str:
 
 
 def _plan(call: argparse.Namespace, face: _Face) -> int:
-    from core import jobs
     from core.files import json_bytes, open_sheet, refuse_other, write_whole
+    from core.forecast import forecast, planned
 
     if call.to is not None:
         refuse_other(call.to, "plan", "arrangement")
     sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
     face.remark(sheet.notices)
-    made, verdict = jobs.planned(sheet, call.outcomes, call.memory, face.tick)
+    made, verdict = planned(sheet, call.outcomes, call.memory, face.tick)
     if call.to is not None:
         write_whole(call.to, json_bytes(made.plan.to_json()))
-    told = jobs.forecast(made, verdict)
+    told = forecast(made, verdict)
     face.show(_numbers(told), _plan_lines(sheet, made, told))
     return 0
 
@@ -247,6 +247,7 @@ def _size_lines(size: dict[str, Any]) -> list[str]:
 def _draw(call: argparse.Namespace, face: _Face) -> int:
     from core import jobs
     from core.files import unique_parties
+    from core.forecast import forecast
 
     wish = jobs.Wish(
         sheet=call.sheet,
@@ -264,7 +265,8 @@ def _draw(call: argparse.Namespace, face: _Face) -> int:
     result = jobs.draw_to_files(wish, cancelled=face.cancel.is_set, on_progress=face.progress, tick=face.tick)
     face.remark(result.sheet.notices)
     told = {
-        **jobs.forecast(result.ready, result.verdict),
+        **forecast(result.ready),
+        "verdict": "possible",
         "ledger": result.record["ledger"],
         "admissible": result.record["admissible"],
         "outcomes_file": str(result.outcomes_file),
@@ -303,7 +305,7 @@ def _outcome_lines(sheet: Any, rows: Any, most: int = 60) -> list[str]:
 def _chances(call: argparse.Namespace, face: _Face) -> int:
     from core.chances import inclusion
     from core.files import open_sheet
-    from core.jobs import planned
+    from core.forecast import planned
 
     sheet = open_sheet(call.sheet, allow_outside=call.allow_outside)
     face.remark(sheet.notices)

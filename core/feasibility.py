@@ -63,6 +63,18 @@ class Verdict:
     seconds: float = 0.0
 
 
+@dataclass(frozen=True)
+class Finding:
+    """What is known so far: values of all variables, or numbers of rules that conflict. The last finding says so."""
+
+    state: State
+    values: Values | None = None
+    conflict: tuple[int, ...] = ()
+    is_minimal: bool = False
+    changes: tuple[str, ...] = ()
+    is_last: bool = False
+
+
 def diagnose(sheet: Sheet, *, seconds: float = SECONDS, tick: Callable[[], None] = lambda: None) -> Verdict:
     """Return whether the rules in force can hold together. `tick` is called often; if it raises, the work ends at once."""
     with Inquiry(sheet, seconds) as inquiry:
@@ -77,7 +89,7 @@ class Inquiry:
 
     def __init__(self, sheet: Sheet, seconds: float = SECONDS) -> None:
         self._sheet, self._seconds, self._began = sheet, seconds, 0.0
-        self._finding = _Finding("unknown")
+        self._finding = Finding("unknown")
         self._verdict: Verdict | None = None
         self._process: SpawnProcess | None = None
         self._pipe: Connection | None = None
@@ -101,7 +113,7 @@ class Inquiry:
         while (verdict := self.verdict(LOOK)) is None:
             tick()
             if time.monotonic() > end:
-                return self._judged()
+                return self._judged_now()
         return verdict
 
     def verdict(self, wait: float = 0.0) -> Verdict | None:
@@ -118,13 +130,16 @@ class Inquiry:
                 over = True
             if over or self._finding.is_last:
                 self.close()
-                self._verdict = self._judged()
+                self._verdict = self._judged_now()
         return self._verdict
+
+    def _judged_now(self) -> Verdict:
+        return judged(self._sheet, self._finding, time.monotonic() - self._began)
 
     def _left(self) -> float:
         return self._began + self._seconds - time.monotonic()
 
-    def _take(self, pipe: Connection, message: _Finding | Exception | None) -> None:
+    def _take(self, pipe: Connection, message: Finding | Exception | None) -> None:
         if message is None:  # the process is ready
             pipe.send_bytes(pickle.dumps((self._sheet.kind, self._sheet.rules, self._left())))
         elif isinstance(message, Exception):
@@ -132,36 +147,25 @@ class Inquiry:
         else:
             self._finding = message
 
-    def _judged(self) -> Verdict:
-        sheet, finding = self._sheet, self._finding
-        verdict = Verdict(
-            finding.state,
-            conflict=tuple(sheet.rules[number].id for number in finding.conflict),
-            minimal=finding.is_minimal,
-            changes=finding.changes,
-            seconds=time.monotonic() - self._began,
-        )
-        if finding.values is None:
-            return verdict
-        row = sheet.kind.row(np.array(finding.values)[sheet.kind.variables()])
-        if all(bool(rule.check(row[None])[0]) for rule in sheet.rules):
-            return replace(verdict, witness=row)
-        return replace(verdict, state="unknown")
+
+def judged(sheet: Sheet, finding: Finding, seconds: float) -> Verdict:
+    """Return the verdict that a finding makes; a witness is put to every rule's check before it counts."""
+    verdict = Verdict(
+        finding.state,
+        conflict=tuple(sheet.rules[number].id for number in finding.conflict),
+        minimal=finding.is_minimal,
+        changes=finding.changes,
+        seconds=seconds,
+    )
+    if finding.values is None:
+        return verdict
+    row = sheet.kind.row(np.array(finding.values)[sheet.kind.variables()])
+    if all(bool(rule.check(row[None])[0]) for rule in sheet.rules):
+        return replace(verdict, witness=row)
+    return replace(verdict, state="unknown")
 
 
 # -- in the other process -------------------------------------------------------------------------------------------
-
-
-@dataclass(frozen=True)
-class _Finding:
-    """What is known so far: values of all variables, or numbers of rules that conflict. The last finding says so."""
-
-    state: State
-    values: Values | None = None
-    conflict: tuple[int, ...] = ()
-    is_minimal: bool = False
-    changes: tuple[str, ...] = ()
-    is_last: bool = False
 
 
 def _serve(pipe: Connection) -> None:
@@ -187,23 +191,23 @@ def stated(kind: OutcomeKind, rules: Sequence[Rule]) -> Statement:
     return statement
 
 
-def findings(kind: OutcomeKind, rules: Sequence[Rule], seconds: float) -> Iterator[_Finding]:
+def findings(kind: OutcomeKind, rules: Sequence[Rule], seconds: float) -> Iterator[Finding]:
     """Yield what is found, each time more than before."""
     deadline = time.monotonic() + seconds
     if np.prod(kind.cells()) > MOST_CELLS:
-        yield _Finding("unknown", is_last=True)
+        yield Finding("unknown", is_last=True)
         return
     solver = Solver(stated(kind, rules), deadline)
     conflict = tuple(range(len(rules)))
     state, values = solver.solve(conflict)
     if state != "impossible":
-        yield _Finding(state, values, is_last=True)
+        yield Finding(state, values, is_last=True)
         return
-    yield _Finding(state, conflict=conflict)
+    yield Finding(state, conflict=conflict)
     conflict = solver.core(conflict)
-    yield _Finding(state, conflict=conflict)
+    yield Finding(state, conflict=conflict)
     conflict, minimal = solver.smallest(conflict)
-    found = _Finding(state, conflict=conflict, is_minimal=minimal)
+    found = Finding(state, conflict=conflict, is_minimal=minimal)
     yield found
     yield replace(found, changes=tuple(_changes(solver, conflict, rules)), is_last=True)
 

@@ -66,8 +66,9 @@ class Plan:
     arrangement
         Name of the order of levels.
     built_in, partly, checked
-        Ids of the rules built in; of those built in for the heavy nodes of each level only, with the number of such nodes;
-        and of those checked, in the order of checking. A rule partly built in is checked too, unless no node forgot it.
+        Ids of the rules built in (an id with "~" is a weaker form of a rule, see `Rule.weaker`); of those built in for the
+        heavy nodes of each level only, with the number of such nodes; and of those checked, in the order of checking. A rule
+        partly built in is checked too, unless no node forgot it.
     block
         Proposals per block.
     edges, nodes
@@ -211,11 +212,16 @@ class _Search:
 
         All orders of levels are tried, or only the one named.
         """
-        chosen = tuple(rule for rule in self.sheet.rules if rule in rules)
+        chosen = (
+            *(rule for rule in self.sheet.rules if rule in rules),
+            *(rule for rule in rules if rule not in self.sheet.rules),
+        )
         name = _name(chosen, partly)
         if name in self.found:
             return self.found[name]
-        if self.tried.get(name, -1) >= budget or (self.found and self.spent > self.allowance()):
+        if self.found:
+            budget = min(budget, int(self.allowance() - self.spent) // STEPS_PER_EDGE)
+        if self.tried.get(name, 0) >= budget:
             return None
         self.tried[name] = budget
         smallest = self._smallest(chosen, partly, budget, [arrangement] if arrangement else self._orders())
@@ -239,6 +245,10 @@ class _Search:
             if found is not None and found[0].tried < BUDGETS[0]:
                 break
             limit = budget if found is None else found[0].tried - 1
+            if self.found:
+                limit = min(limit, int(self.allowance() - self.spent) // STEPS_PER_EDGE)
+            if limit <= 0:
+                break
             try:
                 diagram = superset(self.sheet.kind, chosen, arrangement, partly=partly, budget=limit, tick=self.tick)
             except OverBudget as over:
@@ -269,23 +279,31 @@ class _Search:
             budget = min(step, largest)
             if self.spent > self.allowance():
                 break
-            full = self.attempt(self.sheet.rules, budget)
+            full = self.attempt(self.sheet.rules, budget) if self._hopeful() else None
             if full is not None:
                 # the exact size is worth a cheap build, even where a draw alone would not need it
                 return full if full.cost(self.outcomes) <= ALWAYS else self.best()
-            self._grow(budget)
+            plain, best = self.found[_name((), ())], self.best()
+            self._grow(budget, best)
+            if best is not plain and not best.pilot.accepted:
+                self._grow(budget, plain)  # a wider budget may hold what the first choices left no room for
         return self.best()
+
+    def _hopeful(self) -> bool:
+        """Return whether no single rule has been too large on its own: then all of them would hardly fit."""
+        alone = ((rule.id,) for rule in self.sheet.rules)
+        return not any((ids, ()) in self.tried and (ids, ()) not in self.found for ids in alone)
 
     def allowance(self) -> float:
         """Return the steps that may be spent on planning: as much as the best plan so far takes to draw."""
         return max(ALWAYS, self.best().cost(self.outcomes))
 
-    def _grow(self, budget: int) -> None:
+    def _grow(self, budget: int, current: _Candidate) -> None:
         """Build in one rule more at a time, the one that rejects most first, as far as the budget holds them.
 
-        What does not fit as a whole is tried partly: with as many nodes per level that remember it as the budget allows.
+        What does not fit as a whole is tried in a weaker form, and then partly: with as many nodes per level that remember
+        it as the budget allows.
         """
-        current = self.best()
         left = [rule for rule in current.checks if rule not in [r for r, _ in current.partly]]
         while left:
             counts = current.pilot.rules
@@ -295,7 +313,10 @@ class _Search:
                 return
             # the first rule settles the order of levels
             order = current.arrangement if current.rules or current.partly else ""
-            candidate = self.attempt((*current.rules, rule), budget, order, current.partly)
+            rest = [r for r in current.rules if not r.id.startswith(f"{rule.id}~")]
+            candidate = None
+            for form in (rule, *rule.weaker()):
+                candidate = candidate or self.attempt((*rest, form), budget, order, current.partly)
             if candidate is None and budget > BUDGETS[0] and rule.counts_along():
                 partly = (*current.partly, (rule, budget // EDGES_PER_WIDTH))
                 candidate = self.attempt(current.rules, budget, order, partly)
@@ -387,11 +408,12 @@ def ready(sheet: Sheet, plan: Plan, *, tick: Tick = lambda: None) -> Ready:
     if plan.sheet != sheet.digest:
         raise ValueError("the plan was made for another sheet")
     known = {rule.id: rule for rule in sheet.rules}
-    named = {*plan.built_in, *plan.checked, *(id for id, _ in plan.partly)}
-    if named != set(known) or plan.arrangement not in ARRANGEMENTS:
+    forms = known | {form.id: form for rule in sheet.rules for form in rule.weaker()}
+    held = {*plan.built_in, *plan.checked, *(id for id, _ in plan.partly)}
+    if not set(known) <= held <= set(forms) or plan.arrangement not in ARRANGEMENTS:
         raise ValueError("the plan names other rules than the sheet")
     largest = int(plan.memory * 2**30) // BYTES_PER_EDGE
-    built_in = [rule for rule in sheet.rules if rule.id in plan.built_in]
+    built_in = [forms[id] for id in plan.built_in]
     partly = [(known[id], width) for id, width in plan.partly]
     diagram = superset(sheet.kind, built_in, plan.arrangement, partly=partly, budget=largest, tick=tick)
     if diagram.forgetful and not {id for id, _ in plan.partly} <= set(plan.checked):
@@ -445,6 +467,11 @@ def _reasons(search: _Search, best: _Candidate) -> tuple[str, ...]:
         count = best.pilot.rules[rule.id]
         share = f"rejects {100 * count.any / max(1, best.pilot.sampled):.3g} % of the pilot's proposals"
         name = _name([r for r in rules if r in best.rules or r is rule], best.partly)
+        form = next((r.id for r in best.rules if r.id.startswith(f"{rule.id}~")), None)
+        if form is not None:
+            step = form.split("~")[1]
+            words.append(f"Rule {rule.id} is built in roughly (rounded to steps of {step}) and checked ({share}).")
+            continue
         if rule.id in widths:
             words.append(
                 f"Rule {rule.id} is built in partly, for the {widths[rule.id]:,} most likely states of each level, and "

@@ -222,6 +222,8 @@ def treatment(plan: Plan, id: str) -> str:
     """Return how the plan treats a rule, in words."""
     if id in plan.built_in:
         return "built in"
+    if any(form.startswith(f"{id}~") for form in plan.built_in):
+        return "built in, partly"
     if any(id == part for part, _ in plan.partly):
         return "built in, partly" if id in plan.checked else "built in"
     return "checked"

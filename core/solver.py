@@ -99,7 +99,7 @@ class Solver:
             state, solved = self._run(program, share / 3)
             if state != "possible" or solved is None:
                 return [], False
-            program.model.add(objective <= round(solved.objective_value))
+            program.model.add(objective <= solved.value(objective))
             moved = [(of, is_least, solved.value(slack)) for of, is_least, slack in program.slacks]
             changes = [Change(of, is_least, by) for of, is_least, by in moved if by]
         if len(changes) != 1:

@@ -9,6 +9,7 @@ import pytest
 
 from core import jobs
 from core.files import open_sheet
+from core.forecast import forecast
 from core.planner import make_plan
 from core.sceptic import examine
 from core.supersets import superset
@@ -37,7 +38,7 @@ def test_expected_figures(case: str) -> None:
         diagram = superset(sheet.kind, built_in, figures["arrangement"], budget=10**7)
         assert str(diagram.size) == size, name
     ready = make_plan(sheet)
-    told = jobs.forecast(ready)["admissible"]
+    told = forecast(ready)["admissible"]
     low, high = (Fraction(bound) for bound in figures["admissible"])
     if told["exact"]:
         assert low <= int(told["size"]) <= high

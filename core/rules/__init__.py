@@ -97,6 +97,13 @@ class Rule(ABC):
         """Return the parts that hold the rule over these groups of units, or None if it can only be checked."""
         return None
 
+    def weaker(self) -> Sequence[Rule]:
+        """Return rules that every outcome meets that meets this one, and that are cheaper to build in; the strictest first.
+
+        Their ids begin with this rule's id and "~". Building one in loses no admissible outcome; this rule is still checked.
+        """
+        return ()
+
     def counts_along(self) -> bool:
         """Return whether the rule is held by parts alone, so that it can also be built in for some states only."""
         return bool(self.labels()) and self.cells() is None and self.automaton() is None

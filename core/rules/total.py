@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -11,12 +12,16 @@ from pydantic import Field
 
 from core.frame import Amounts
 from core.kinds import Members
+from core.kinds.selection import Selection
 from core.parts import Count, Mask, Part
 from core.process import Rows
 from core.reading import Bound, Report
 from core.rules import ASSIGNMENT, ROSTER, SELECTION, Case, Rule, heads
 from core.setting import RuleFields, Scope, Setting, Where, scope_terms, scope_words, where_words
 from core.statement import Statement
+
+# into how many steps the weaker forms of a total divide the largest sum
+_PARTS = (4000, 1000, 250)
 
 
 class TotalFields(RuleFields):
@@ -144,6 +149,39 @@ class Total(Rule):
             for i, scope in enumerate(self._scopes[:12])
         ]
         return ", ".join(told)
+
+    def weaker(self) -> Sequence[Rule]:
+        """Return the same total in larger units, rounded so that whatever meets this one meets it too.
+
+        With a = step x w + r, 0 <= r < step, a sum of a is step x (sum of w) + (sum of r); the sum of r lies between the
+        smallest and the largest that can be drawn, so the bounds on the sum of w are loosened by these.
+        """
+        values = self._amounts.values
+        picked = self._kind.most if isinstance(self._kind, Selection) else len(values)
+        spread = int(np.sort(np.abs(values))[len(values) - picked :].sum())
+        return [self._in_steps(spread // parts) for parts in _PARTS if spread // parts > 1]
+
+    def _in_steps(self, step: int) -> Rule:
+        values = self._amounts.values
+        rest = values % step  # the remainder of a division, no draw
+        scopes = []
+        for scope in self._scopes:
+            least, most = self._remainders(rest, scope)
+            low = None if scope.low is None else -((most - scope.low) // step)
+            high = None if scope.high is None else (scope.high - least) // step
+            scopes.append(replace(scope, low=low, high=high))
+        rule = Total(self._setting, scopes, Amounts(values // step, 0), self._fields)
+        rule.id, rule.note = f"{self.id}~{step}", ""
+        return rule
+
+    def _remainders(self, rest: NDArray[np.int64], scope: Scope) -> tuple[int, int]:
+        """Return the smallest and largest sum of remainders that an outcome can have in a scope."""
+        ordered = np.sort(rest[scope.units])
+        if isinstance(self._kind, Selection):
+            least = self._kind.least if scope.units.all() else 0
+            return int(ordered[:least].sum()), int(ordered[max(0, len(ordered) - self._kind.most) :].sum())
+        slots = len(self._kind.places.ids) if self._kind.name == ROSTER else 1
+        return 0, int(ordered.sum()) * slots
 
     def labels(self) -> list[NDArray[np.int64]]:
         """Units are told apart by their amounts in each scope."""

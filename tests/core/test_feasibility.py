@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import copy
 import dataclasses
+import hashlib
 import itertools
 import json
 import multiprocessing
@@ -20,7 +21,7 @@ import numpy as np
 import pytest
 from ortools.sat.python import cp_model
 
-from core import feasibility, jobs
+from core import feasibility, forecast, jobs
 from core.__main__ import main
 from core.errors import Cancelled, Infeasible, TooRare
 from core.feasibility import Inquiry, Verdict, diagnose, findings, stated
@@ -43,10 +44,8 @@ AMPLE = 30.0
 
 def judged(sheet: Sheet, seconds: float = AMPLE) -> Verdict:
     """Return the verdict on a sheet without starting a process."""
-    inquiry = Inquiry(sheet, seconds)
-    for finding in findings(sheet.kind, sheet.rules, seconds):
-        inquiry._finding = finding
-    return inquiry._judged()
+    *_, last = findings(sheet.kind, sheet.rules, seconds)
+    return feasibility.judged(sheet, last, seconds)
 
 
 def minimal(sheet: Sheet, conflict: Collection[str]) -> bool:
@@ -290,10 +289,8 @@ SMALL = sheet_of([{"id": f"u{i}"} for i in range(4)], {"kind": "selection"}, [{"
 
 def hard_text() -> str:
     """Return a sheet that nobody decides soon: seven columns of numbers, half of each to be met exactly."""
-    units = [
-        {"id": f"u{i}"} | {f"n{k}": (7919 * (i + 1) * (k + 1) ** 2 + 104729 * i * i) % 101 for k in range(7)}
-        for i in range(60)
-    ]
+    digests = [hashlib.sha256(bytes([i])).digest() for i in range(60)]
+    units = [{"id": f"u{i}"} | {f"n{k}": digest[k] for k in range(7)} for i, digest in enumerate(digests)]
     halves = {f"n{k}": sum(unit[f"n{k}"] for unit in units) // 2 for k in range(7)}
     rules = [{"kind": "total", "column": column, "min": half, "max": half} for column, half in halves.items()]
     return sheet_text(units, {"kind": "selection"}, rules)
@@ -446,40 +443,42 @@ def rare_sheet(folder: Path) -> Path:
 @pytest.fixture
 def nothing_built_in(monkeypatch: pytest.MonkeyPatch) -> None:
     """Let planning build in nothing and accept nothing in its pilot."""
-    monkeypatch.setattr(jobs, "make_plan", lambda sheet, **_: unbuilt(sheet))
+    monkeypatch.setattr(forecast, "make_plan", lambda sheet, **_: unbuilt(sheet))
 
 
 def test_a_doubtful_plan_gets_a_verdict_and_stays_as_it_is(tmp_path: Path, nothing_built_in: None) -> None:
     sheet = open_sheet(rare_sheet(tmp_path), allow_outside=False)
-    made, verdict = jobs.planned(sheet, 1, 4.0)
+    made, verdict = forecast.planned(sheet, 1, 4.0)
     assert made.plan.digest == unbuilt(sheet).plan.digest
     assert verdict is not None
     assert verdict.state == "possible"
-    assert jobs.forecast(made, verdict)["verdict"] == "possible but rare: an outcome was found without drawing"
-    assert jobs.forecast(made, Verdict("unknown"))["verdict"].startswith("not decided: ")
+    assert forecast.forecast(made, verdict)["verdict"] == "possible but rare: an outcome was found without drawing"
+    assert forecast.forecast(made, Verdict("unknown"))["verdict"].startswith("not decided: ")
 
 
 def test_a_plan_without_doubt_starts_no_process(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(feasibility, "start", None)
-    made, verdict = jobs.planned(SMALL, 1, 4.0)
+    made, verdict = forecast.planned(SMALL, 1, 4.0)
     assert verdict is None
     assert made.plan.digest == make_plan(SMALL).plan.digest
-    assert jobs.forecast(made)["verdict"] == "possible"
+    assert forecast.forecast(made)["verdict"] == "possible"
 
 
-def test_the_limit_tells_what_is_known(tmp_path: Path, nothing_built_in: None, monkeypatch: pytest.MonkeyPatch) -> None:
-    wish = jobs.Wish(rare_sheet(tmp_path), (("", "123"),), tmp_path / "drawn", limit=2000)
+def test_the_limit_tells_what_is_known(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    path, plan = rare_sheet(tmp_path), tmp_path / "plan.json"
+    plan.write_text(json.dumps(unbuilt(open_sheet(path, allow_outside=False)).plan.to_json()))
+    wish = jobs.Wish(path, (("", "123"),), tmp_path / "drawn", plan=plan, limit=2000)
     with pytest.raises(TooRare) as caught:
         jobs.draw_to_files(wish)
     told = str(caught.value)
     assert "There is one: it was found without drawing." in told
-    assert "rarer than 1 in 5" in told
+    assert "rarer than 1 in 542" in told
     assert caught.value.bound == pytest.approx(0.00184, abs=1e-5)
     assert "Lifting rule total 1 would help most: about 0.0" in told
-    monkeypatch.setattr(jobs, "_decided", lambda *_: Verdict("unknown"))
+    monkeypatch.setattr(jobs, "decided", lambda *_: Verdict("unknown"))
     with pytest.raises(TooRare, match="Whether there is one at all is not decided."):
         jobs.draw_to_files(dataclasses.replace(wish, folder=tmp_path / "again"))
-    monkeypatch.setattr(jobs, "_decided", lambda *_: None)
+    monkeypatch.setattr(jobs, "decided", lambda *_: None)
     with pytest.raises(TooRare, match="There are outcomes: the pilot accepted some."):
         jobs.draw_to_files(dataclasses.replace(wish, folder=tmp_path / "once more"))
 
@@ -525,10 +524,10 @@ def test_long_planning_ends_when_it_is_proved_in_vain(tmp_path: Path, monkeypatc
             tick()
         raise AssertionError
 
-    monkeypatch.setattr(jobs, "make_plan", endless)
+    monkeypatch.setattr(forecast, "make_plan", endless)
     began = time.monotonic()
     with pytest.raises(Infeasible) as caught:
-        jobs.planned(open_sheet(impossible_sheet(tmp_path), allow_outside=False), 1, 4.0)
+        forecast.planned(open_sheet(impossible_sheet(tmp_path), allow_outside=False), 1, 4.0)
     assert str(caught.value) == TOLD
     assert caught.value.rules == ("total 1", "two")
     assert caught.value.minimal
@@ -539,26 +538,46 @@ def test_long_planning_ends_when_it_is_proved_in_vain(tmp_path: Path, monkeypatc
 def test_the_planners_own_proof_stands_where_there_is_no_time_to_explain(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr(jobs, "EXPLAINING", 0.0)
+    monkeypatch.setattr(forecast, "EXPLAINING", 0.0)
     with pytest.raises(Infeasible) as caught:
-        jobs.planned(open_sheet(impossible_sheet(tmp_path), allow_outside=False), 1, 4.0)
+        forecast.planned(open_sheet(impossible_sheet(tmp_path), allow_outside=False), 1, 4.0)
     assert str(caught.value) == TOLD.splitlines()[0]
 
 
-def test_two_proofs_that_contradict_each_other_are_a_mistake_of_the_program(monkeypatch: pytest.MonkeyPatch) -> None:
-    def wrong(*_: object, **__: object) -> Ready:
-        raise Infeasible("No outcome is possible.", ("quota 1",), ("",))
+def test_of_two_proofs_the_smaller_one_is_told(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """What another process has found so far may name more rules than planning itself; then planning is believed."""
+    verdict = Verdict("impossible", conflict=("total 1", "two"), minimal=False)
+    monkeypatch.setattr(Inquiry, "wait", lambda *_: verdict)
+    sheet = open_sheet(impossible_sheet(tmp_path), allow_outside=False)
+    for rules, unsure in ((("total 1", "two"), False), (("total 1", "two", "a third"), True)):
+        monkeypatch.setattr(forecast, "make_plan", Proving(rules))
+        with pytest.raises(Infeasible) as caught:
+            forecast.planned(sheet, 1, 4.0)
+        assert caught.value.rules == ("total 1", "two")
+        assert ("Perhaps not all of them are needed" in str(caught.value)) == unsure
 
-    monkeypatch.setattr(jobs, "make_plan", wrong)
+
+@dataclasses.dataclass
+class Proving:
+    """A planner that finds everything impossible."""
+
+    rules: tuple[str, ...]
+
+    def __call__(self, *_: object, **__: object) -> Ready:
+        raise Infeasible("No outcome is possible.", self.rules, self.rules)
+
+
+def test_two_proofs_that_contradict_each_other_are_a_mistake_of_the_program(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(forecast, "make_plan", Proving(("quota 1",)))
     with pytest.raises(RuntimeError, match="proved impossible what is possible"):
-        jobs.planned(SMALL, 1, 4.0)
+        forecast.planned(SMALL, 1, 4.0)
 
 
 def test_a_conflict_that_may_be_smaller_says_so(
-    capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, tmp_path: Path
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    verdict = Verdict("impossible", conflict=("total 1", "two"), minimal=False)
-    monkeypatch.setattr(jobs.Inquiry, "wait", lambda *_: verdict)
+    monkeypatch.setattr(Inquiry, "wait", lambda *_: Verdict("impossible", conflict=("total 1", "two"), minimal=False))
+    monkeypatch.setattr(forecast, "make_plan", Proving(("total 1", "two", "a third")))
     assert main(["plan", str(impossible_sheet(tmp_path))]) == 3
     told = capsys.readouterr().err
     assert "Perhaps not all of them are needed for that" in told
