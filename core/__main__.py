@@ -7,6 +7,7 @@ import contextlib
 import io
 import json
 import os
+import signal
 import sys
 import threading
 import time
@@ -75,22 +76,24 @@ def _interruptible(job: Callable[[], T], face: _Face) -> T:
     """Run the job in a thread, so that Ctrl-C is answered at once even in the middle of a long array operation."""
     outcome: list[T] = []
     error: list[BaseException] = []
+    done = threading.Event()
 
     def work() -> None:
         try:
             outcome.append(job())
         except BaseException as raised:  # handed to the main thread, whatever it is
             error.append(raised)
+        finally:
+            done.set()
 
-    thread = threading.Thread(target=work, daemon=True)
-    thread.start()
+    threading.Thread(target=work, daemon=True).start()
     try:
-        while thread.is_alive():
-            thread.join(0.05)
+        while not done.wait(0.05):  # not Thread.join: interrupted, it takes a running thread for a finished one
+            pass
     except KeyboardInterrupt:
+        signal.signal(signal.SIGINT, signal.SIG_IGN)  # one answer is enough
         face.cancel.set()
-        thread.join(PATIENCE)
-        if not thread.is_alive() and error and isinstance(error[0], LotwrightError):
+        if done.wait(PATIENCE) and error and isinstance(error[0], LotwrightError):
             raise error[0] from None
         face.fail(Cancelled("Stopped. Finished blocks are kept; a draw goes on with --resume."))
         sys.stderr.flush()

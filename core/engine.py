@@ -8,20 +8,16 @@ from __future__ import annotations
 
 import base64
 import contextlib
-import multiprocessing
-import os
 import pickle
-import signal
-import threading
 from collections.abc import Callable, Generator, Iterator
 from dataclasses import dataclass
-from multiprocessing import resource_tracker
 from multiprocessing.connection import Connection, wait
 from multiprocessing.context import SpawnProcess
 from typing import Any, Protocol, cast
 
 import numpy as np
 
+from core import children
 from core.errors import CallError, Cancelled
 from core.ledger import Count, Ledger
 from core.planner import Ready
@@ -257,24 +253,15 @@ def _one(job: Job, number: int) -> Block:
 
 @contextlib.contextmanager
 def _started(job: Job, count: int) -> Iterator[list[Connection]]:
-    """Start worker processes; yield the pipe to each. At the end nobody waits for blocks that are not wanted any more.
-
-    Each worker has a pipe of its own and shares nothing with the others: so it can be ended at any moment, and nothing is
-    left behind if it is the program itself that is ended.
-    """
-    context = multiprocessing.get_context("spawn")
+    """Start worker processes; yield the pipe to each. At the end nobody waits for blocks that are not wanted any more."""
     packed = pickle.dumps(job)
     processes: list[SpawnProcess] = []
     pipes: list[Connection] = []
     try:
-        with _deaf():
-            for _ in range(count):
-                mine, theirs = context.Pipe()
-                pipes.append(mine)
-                process = context.Process(target=_serve, args=(theirs,), daemon=True)
-                process.start()
-                processes.append(process)
-                theirs.close()
+        for _ in range(count):
+            process, pipe = children.start(_serve)
+            processes.append(process)
+            pipes.append(pipe)
         for pipe in pipes:
             pipe.send_bytes(packed)
         yield pipes
@@ -292,30 +279,12 @@ def _started(job: Job, count: int) -> Iterator[list[Connection]]:
             pipe.close()
 
 
-@contextlib.contextmanager
-def _deaf() -> Iterator[None]:
-    """Start processes that do not hear Ctrl-C, not even while they begin: answering it is left to their parent."""
-    if not hasattr(signal, "pthread_sigmask"):
-        yield
-        return
-    resource_tracker.ensure_running()  # to start it later would undo what follows
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
-    try:
-        yield
-    finally:
-        signal.pthread_sigmask(signal.SIG_SETMASK, before)
-
-
 def _serve(pipe: Connection) -> None:
-    """Make blocks in a worker process, which ends with its parent."""
-    with contextlib.suppress(ValueError):
-        signal.signal(signal.SIGINT, signal.SIG_IGN)
-    threading.Thread(target=_end_with_parent, daemon=True).start()
-    with contextlib.suppress(EOFError, OSError):  # the parent is gone
-        job: Job = pickle.loads(pipe.recv_bytes())
-        while True:
-            number = pipe.recv()
-            pipe.send((number, _attempt(job, number)))
+    """Make blocks in a worker process."""
+    job: Job = pickle.loads(pipe.recv_bytes())
+    while True:
+        number = pipe.recv()
+        pipe.send((number, _attempt(job, number)))
 
 
 def _attempt(job: Job, number: int) -> Block | Exception:
@@ -324,10 +293,3 @@ def _attempt(job: Job, number: int) -> Block | Exception:
         return _one(job, number)
     except Exception as error:
         return error
-
-
-def _end_with_parent() -> None:
-    parent = multiprocessing.parent_process()
-    if parent is not None:
-        parent.join()
-        os._exit(1)
