@@ -95,7 +95,7 @@ def _interruptible(job: Callable[[], T], face: _Face) -> T:
         face.cancel.set()
         if done.wait(PATIENCE) and error and isinstance(error[0], LotwrightError):
             raise error[0] from None
-        face.fail(Cancelled("Stopped. Finished blocks are kept; a draw goes on with --resume."))
+        face.fail(Cancelled("Stopped. What a draw had accepted is kept: give the same call again with --resume."))
         sys.stderr.flush()
         os._exit(Cancelled.exit_code)
     if error:
@@ -240,9 +240,12 @@ def _size_lines(size: dict[str, Any]) -> list[str]:
 
     if size["exact"]:
         count = int(size["size"])
-        lines = [f"Admissible outcomes: {size_words(count, exact=True)} (exact: {count})."]
+        digits = f"; in digits {count}" if count >= 10**15 else ""
+        lines = [f"Admissible outcomes: {size_words(count, exact=True)} (exact{digits})."]
         return [*lines, "There is only one admissible outcome: no randomness is left."] if count == 1 else lines
     low, high = size_words(int(size["low"]), exact=True), size_words(int(size["high"]), exact=True)
+    if size["estimate"] == "0":
+        return [f"Admissible outcomes: none was met in the pilot, so at most {high} (97.5 % sure)."]
     estimate = size_words(int(size["estimate"]), exact=True)
     return [f"Admissible outcomes: about {estimate}, between {low} and {high} (95 %)."]
 
@@ -360,7 +363,7 @@ def _check(call: argparse.Namespace, face: _Face) -> int:
 
 def _freeze(call: argparse.Namespace, face: _Face) -> int:
     from core import jobs
-    from core.record import readable
+    from core.record import readable, seed_advice
 
     content = jobs.freeze(
         call.sheet, outcomes=call.outcomes, memory=call.memory, allow_outside=call.allow_outside, tick=face.tick
@@ -369,11 +372,11 @@ def _freeze(call: argparse.Namespace, face: _Face) -> int:
     face.remark(made.sheet.notices)
     told = {"digest": content["digest"], "readable": readable(content["digest"]), "entry": content["entry"]}
     lines = [
-        f"Frozen {content['at']}: the sheet, {len(content['files'])} list(s) and the plan for {call.outcomes:,} outcome(s).",
+        f"Frozen {content['at']}: the sheet, its lists and the plan; outcomes planned for: {call.outcomes:,}.",
         f"Digest: {content['digest']}",
         f"To read aloud: {readable(content['digest'])}",
         f"Entry {content['entry']} of the draw book {jobs.book_of(call.sheet).path.name}.",
-        "Publish the digest before the seed is known; then draw with a seed from outside.",
+        f"Publish this digest before the seed is known; then draw with a seed from outside: {seed_advice(made)}.",
     ]
     face.show(told, lines)
     return 0
@@ -402,7 +405,7 @@ def _verify(call: argparse.Namespace, face: _Face) -> int:
         tick=face.tick,
     )
     lines = [
-        f"Verified: the replay of {told['proposals']:,} proposals gives the same {told['outcomes']:,} outcome(s), "
+        f"Verified: the replay of {told['proposals']:,} proposals gives the same outcomes ({told['outcomes']:,}), "
         "byte for byte.",
         f"Draw {told['draw']} of a frozen sheet." if told["frozen"] else "The sheet was not frozen before this draw.",
         told["versions"],

@@ -379,7 +379,9 @@ def _best_lifted(ledger: Ledger) -> str:
     lifted = {id: share for id in ledger.rules if (share := ledger.lifted(id))}
     if lifted:
         best = max(lifted, key=lifted.__getitem__)
-        return f"Lifting rule {best} would help most: about {lifted[best]:.2g} of the proposals would be accepted."
+        return (
+            f"Lifting rule {best} would help most: about {100 * lifted[best]:.2g} % of the proposals would be accepted."
+        )
     worst = max(ledger.rules, key=lambda id: ledger.rules[id].first, default="")
     return f"Most proposals were rejected first by rule {worst}." if worst else ""
 

@@ -75,6 +75,13 @@ def needed_bits(size: int) -> float:
     return size.bit_length() - 1 + math.log2(size / (1 << (size.bit_length() - 1))) if size > 0 else 0.0
 
 
+def seed_advice(ready: Ready) -> str:
+    """Return in words how long a seed is advised for the outcomes of a plan."""
+    size = admissible(ready.plan, int(ready.diagram.weight))
+    bits = needed_bits(int(size.get("size") or size["high"])) + MARGIN_BITS
+    return f"at least {bits:.0f} bits, as {math.ceil(bits / math.log2(10))} throws of a ten-sided die carry"
+
+
 # -- sizes ----------------------------------------------------------------------------------------------------------
 
 

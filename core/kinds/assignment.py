@@ -78,7 +78,17 @@ class Assignment(OutcomeKind):
 
     def words(self) -> str:
         """Return what is drawn."""
-        return f"Each of {self.units:,} units goes to one of {len(self.places.ids):,} places."
+        bounds = zip(self.places.ids, self.least, self.most, strict=True)
+        told = ", ".join(f"{name} ({self._limits(low, high)})" for name, low, high in list(bounds)[:12])
+        more = ", ..." if len(self.places.ids) > 12 else ""
+        return f"Each of {self.units:,} units goes to one of {len(self.places.ids):,} places: {told}{more}."
+
+    def _limits(self, low: int, high: int) -> str:
+        if low == 0 and high == self.units:
+            return "any number"
+        if low == 0:
+            return f"at most {high}"
+        return f"exactly {high}" if low == high else f"{low} to {high}"
 
     def cells(self) -> tuple[int, int]:
         """Units by places."""
@@ -168,7 +178,14 @@ class Assignment(OutcomeKind):
 
 
 def _hint(places: Places, report: Report) -> None:
-    """Say so if a column seems to be a misspelt min or max, which would otherwise limit nothing."""
+    """Say so if a column seems to be meant as min or max, which would otherwise limit nothing."""
+    if places.table is not None and not {"min", "max"} & set(places.columns):
+        for column in places.columns:
+            if places.table.is_number(column) and not nearest(column, ("min", "max")):
+                report.notice(
+                    f"the places have neither min nor max, so each may take any number; their column {column} limits nothing "
+                    "unless a rule refers to it."
+                )
     for column in places.columns:
         near = nearest(column, ("min", "max"))
         if near and column not in ("min", "max"):

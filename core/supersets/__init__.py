@@ -12,7 +12,7 @@ from core.parts import Part
 from core.process import Process
 from core.rules import Rule
 from core.supersets.build import build
-from core.supersets.diagram import Diagram
+from core.supersets.diagram import Diagram, OverBudget
 from core.supersets.refine import refine
 
 ARRANGEMENTS = {
@@ -30,6 +30,11 @@ def arrangements(kind: OutcomeKind) -> tuple[str, ...]:
     if kind.name == "assignment":
         return ("near, places", "places, list", "list, places")
     return ("near", "values", "list") if kind.name in ("selection", "pairing") else ("list",)
+
+
+# Beyond so many groups, or groups times places, not even the list of levels is made: no diagram over them would fit.
+MOST_GROUPS = 20_000
+MOST_CELLS = 4_000_000
 
 
 def superset(
@@ -73,6 +78,8 @@ def _assemble(
     if kind.name != "roster":
         labels.append(kind.alike(cells_of_kind))
     members = _members(join_labels(labels, kind.units))
+    if len(members) > MOST_GROUPS or len(members) * kind.cells()[1] > MOST_CELLS:
+        raise OverBudget(0, len(members), 0)
     automata = [automaton for rule in rules if (automaton := rule.automaton()) is not None]
     plain = Arrangement(tuple(range(len(members))), by_place=arrangement.startswith("places"))
     process = kind.process(members, cells_of_kind, plain, automata)
